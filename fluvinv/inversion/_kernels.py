@@ -1,0 +1,303 @@
+"""Compiled loops of the inversion: rows of the sensitivity matrix, and its normal matrix.
+
+Positions are in grid units: u counts columns eastward and v counts rows southward from the north-west map
+node, so that map lines are the whole numbers. A segment is the part of a path inside one map cell, from the
+point where the path enters it (going upstream). Its moments M0 = integral of w dtau and
+M1 = integral of w (tau - tau_in) dtau of the four bilinear weights w run from the entry up to a node.
+"""
+
+import numpy as np
+from numba import njit
+
+_GAUSS = 0.5 / np.sqrt(3.0)
+
+
+@njit(cache=True)
+def _add_moments(ua, va, ta, ub, vb, tb, row, col, tau_in, m0, m1):
+    """Add the moments of the straight piece a-b to m0 and m1: two-point Gauss, exact for cubics."""
+    half = 0.5 * (tb - ta)
+    for side in (-1.0, 1.0):
+        s = 0.5 + side * _GAUSS
+        fu = min(max(ua + s * (ub - ua) - col, 0.0), 1.0)
+        fv = min(max(va + s * (vb - va) - row, 0.0), 1.0)
+        lever = ta + s * (tb - ta) - tau_in
+        for corner in range(4):
+            wu = fu if corner % 2 else 1.0 - fu
+            wv = fv if corner // 2 else 1.0 - fv
+            m0[corner] += half * wu * wv
+            m1[corner] += half * wu * wv * lever
+
+
+@njit(cache=True)
+def _next_line(start, step, line):
+    """Share of the edge at which it meets a map line; beyond 1 when it does not move across lines."""
+    if step == 0.0:
+        return 2.0
+    return (line - start) / step
+
+
+@njit(cache=True)
+def _first_line(start, step):
+    """The first map line met strictly after the start."""
+    if step > 0.0:
+        return np.floor(start) + 1.0
+    return np.ceil(start) - 1.0
+
+
+@njit(cache=True)
+def _cut_edge(ua, va, ub, vb, cuts):
+    """Write the shares (ending with 1) at which the edge a-b meets map lines; return how many there are.
+
+    With an array of length 0 the cuts are counted only.
+    """
+    du = ub - ua
+    dv = vb - va
+    line_u = _first_line(ua, du)
+    line_v = _first_line(va, dv)
+    count = 0
+    last = 0.0
+    while True:
+        su = _next_line(ua, du, line_u)
+        sv = _next_line(va, dv, line_v)
+        s = min(su, sv, 1.0)
+        if s > last or s >= 1.0:
+            if cuts.size > 0:
+                cuts[count] = s
+            count += 1
+            last = s
+        if s >= 1.0:
+            return count
+        if su <= s:
+            line_u += 1.0 if du > 0 else -1.0
+        if sv <= s:
+            line_v += 1.0 if dv > 0 else -1.0
+
+
+@njit(cache=True)
+def _lower_end(node, receiver, u, v, tau, base_u, base_v):
+    """Position and travel time of the lower end of a node's edge."""
+    below = receiver[node]
+    if below < 0:
+        return base_u[node], base_v[node], 0.0
+    return u[below], v[below], tau[below]
+
+
+@njit(cache=True)
+def cross_cells(receiver, u, v, base_u, base_v, n_rows, n_cols, touched):
+    """Mark the map cells that edges cross; return the number of pieces of all edges and the most on one."""
+    none = np.empty(0)
+    total = 0
+    most = 1
+    for node in range(receiver.size):
+        below = receiver[node]
+        ua = u[below] if below >= 0 else base_u[node]
+        va = v[below] if below >= 0 else base_v[node]
+        count = _cut_edge(ua, va, u[node], v[node], none)
+        total += count
+        most = max(most, count)
+        cuts = np.empty(count)
+        _cut_edge(ua, va, u[node], v[node], cuts)
+        last = 0.0
+        for s in cuts:
+            mid = 0.5 * (last + s)
+            row = min(max(int(np.floor(va + mid * (v[node] - va))), 0), n_rows - 2)
+            col = min(max(int(np.floor(ua + mid * (u[node] - ua))), 0), n_cols - 2)
+            touched[row, col] = True
+            last = s
+    return total, most
+
+
+@njit(cache=True)
+def running_moments(
+    receiver, u, v, tau, base_u, base_v, n_rows, n_cols, most,
+    seg_row, seg_col, seg_in, seg_below, seg_m0, seg_m1, seg_rank, node_seg, node_m0, node_m1,
+):  # fmt: skip
+    """Follow every edge upstream and keep, for each node, the moments since it entered its map cell.
+
+    A segment records its cell, its entry time, the segment below and that segment's moments up to here.
+    Returns the number of segments.
+    """
+    cuts = np.empty(most)
+    m0 = np.zeros(4)
+    m1 = np.zeros(4)
+    n_segments = 0
+    for node in range(receiver.size):
+        below = receiver[node]
+        ua, va, ta = _lower_end(node, receiver, u, v, tau, base_u, base_v)
+        du, dv, dt = u[node] - ua, v[node] - va, tau[node] - ta
+        segment = -1
+        m0[:] = 0.0
+        m1[:] = 0.0
+        if below >= 0:
+            segment = node_seg[below]
+            m0[:] = node_m0[below]
+            m1[:] = node_m1[below]
+        last = 0.0
+        for piece in range(_cut_edge(ua, va, u[node], v[node], cuts)):
+            s = cuts[piece]
+            mid = 0.5 * (last + s)
+            row = min(max(int(np.floor(va + mid * dv)), 0), n_rows - 2)
+            col = min(max(int(np.floor(ua + mid * du)), 0), n_cols - 2)
+            start = ta + last * dt
+            if segment < 0 or row != seg_row[segment] or col != seg_col[segment]:
+                seg_row[n_segments] = row
+                seg_col[n_segments] = col
+                seg_in[n_segments] = start
+                seg_below[n_segments] = segment
+                seg_m0[n_segments] = m0
+                seg_m1[n_segments] = m1
+                seg_rank[n_segments] = 1 if segment < 0 else seg_rank[segment] + 1
+                segment = n_segments
+                n_segments += 1
+                m0[:] = 0.0
+                m1[:] = 0.0
+            end = tau[node] if s >= 1.0 else ta + s * dt
+            _add_moments(
+                ua + last * du, va + last * dv, start, ua + s * du, va + s * dv, end,
+                row, col, seg_in[segment], m0, m1,
+            )  # fmt: skip
+            last = s
+        node_seg[node] = segment
+        node_m0[node] = m0
+        node_m1[node] = m1
+    return n_segments
+
+
+@njit(cache=True)
+def _moments_at(
+    time, segment, depth, path, path_tau, receiver, u, v, tau, base_u, base_v,
+    seg_row, seg_col, seg_in, node_seg, node_m0, node_m1, m0, m1,
+):  # fmt: skip
+    """Moments of a segment of the current path from its entry up to a travel time inside it."""
+    low = -1
+    high = depth
+    while high - low > 1:  # path_tau[low] <= time < path_tau[high]; -1 stands for the base point
+        middle = (low + high) // 2
+        if path_tau[middle] <= time:
+            low = middle
+        else:
+            high = middle
+    node = path[high]
+    ua, va, ta = _lower_end(node, receiver, u, v, tau, base_u, base_v)
+    below = receiver[node]
+    start = seg_in[segment]
+    if below >= 0 and node_seg[below] == segment:
+        m0[:] = node_m0[below]
+        m1[:] = node_m1[below]
+        start = ta
+    else:
+        m0[:] = 0.0
+        m1[:] = 0.0
+    if time <= start:
+        return
+    span = tau[node] - ta
+    sa = (start - ta) / span
+    sb = (time - ta) / span
+    du = u[node] - ua
+    dv = v[node] - va
+    _add_moments(
+        ua + sa * du, va + sa * dv, start, ua + sb * du, va + sb * dv, time,
+        seg_row[segment], seg_col[segment], seg_in[segment], m0, m1,
+    )  # fmt: skip
+
+
+@njit(cache=True)
+def _spread_piece(
+    total, row, col, tau_in, upper0, upper1, lower0, lower1, age_index, ages, place, n_places,
+    begin, fill, slot, indices, data,
+):  # fmt: skip
+    """Share a piece inside one map cell and one age step out to its four places and two ages."""
+    last = ages.size - 1
+    for corner in range(4):
+        d0 = upper0[corner] - lower0[corner]
+        if d0 <= 0.0:  # outside the cell's reach, or rounding where a piece has no length
+            continue
+        older = 0.0
+        if age_index < last:
+            d1 = upper1[corner] - lower1[corner]
+            width = ages[age_index + 1] - ages[age_index]
+            older = ((total - tau_in - ages[age_index]) * d0 - d1) / width
+            older = min(max(older, 0.0), d0)
+        column = age_index * n_places + place[row + corner // 2, col + corner % 2]
+        for part in range(2):
+            weight = older if part else d0 - older
+            if weight > 0.0:
+                position = slot[column]
+                if position < begin or position >= fill or indices[position] != column:
+                    position = fill
+                    fill += 1
+                    slot[column] = position
+                    indices[position] = column
+                    data[position] = 0.0
+                data[position] += weight
+            column += n_places
+    return fill
+
+
+@njit(cache=True)
+def fill_rows(
+    first, stop, depth_of, path, path_tau, receiver, u, v, tau, base_u, base_v,
+    seg_row, seg_col, seg_in, seg_below, seg_m0, seg_m1, node_seg, node_m0, node_m1,
+    ages, place, n_places, slot, indptr, indices, data,
+):  # fmt: skip
+    """Write the rows of nodes first to stop - 1; path and path_tau carry on from the rows before.
+
+    A row walks the segments of its path from the node down. Inside a segment, age breaks are found by
+    bisection on the path, which a depth-first traversal keeps on a stack.
+    """
+    upper0, upper1 = np.empty(4), np.empty(4)
+    lower0, lower1 = np.empty(4), np.empty(4)
+    zero = np.zeros(4)
+    fill = 0
+    for node in range(first, stop):
+        depth = depth_of[node]
+        path[depth] = node
+        path_tau[depth] = tau[node]
+        total = tau[node]
+        begin = fill
+        age_index = 0
+        segment = node_seg[node]
+        upper0[:] = node_m0[node]
+        upper1[:] = node_m1[node]
+        while segment >= 0:
+            row, col, tau_in = seg_row[segment], seg_col[segment], seg_in[segment]
+            while age_index < ages.size - 1 and total - ages[age_index + 1] > tau_in:
+                _moments_at(
+                    total - ages[age_index + 1], segment, depth, path, path_tau, receiver, u, v, tau,
+                    base_u, base_v, seg_row, seg_col, seg_in, node_seg, node_m0, node_m1, lower0, lower1,
+                )  # fmt: skip
+                fill = _spread_piece(
+                    total, row, col, tau_in, upper0, upper1, lower0, lower1, age_index, ages, place,
+                    n_places, begin, fill, slot, indices, data,
+                )  # fmt: skip
+                upper0[:] = lower0
+                upper1[:] = lower1
+                age_index += 1
+            fill = _spread_piece(
+                total, row, col, tau_in, upper0, upper1, zero, zero, age_index, ages, place,
+                n_places, begin, fill, slot, indices, data,
+            )  # fmt: skip
+            upper0[:] = seg_m0[segment]
+            upper1[:] = seg_m1[segment]
+            segment = seg_below[segment]
+        indptr[node - first + 1] = fill
+    return fill
+
+
+@njit(cache=True)
+def count_downstream(receiver, depth):
+    """Number of nodes downstream of each node; receivers come before their donors."""
+    for node in range(receiver.size):
+        if receiver[node] >= 0:
+            depth[node] = depth[receiver[node]] + 1
+
+
+@njit(cache=True)
+def normal_matrix(indptr, indices, data, out):
+    """Add G' G to the dense matrix `out`, row by row of the sparse G."""
+    for row in range(indptr.size - 1):
+        for a in range(indptr[row], indptr[row + 1]):
+            i = indices[a]
+            value = data[a]
+            for b in range(indptr[row], indptr[row + 1]):
+                out[i, indices[b]] += value * data[b]

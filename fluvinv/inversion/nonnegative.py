@@ -1,0 +1,114 @@
+"""Rates that must not be negative: the same damped least squares under u >= 0."""
+
+import numpy as np
+from scipy import linalg, sparse, stats
+
+from fluvinv.errors import NumericalError
+from fluvinv.inversion import _kernels
+from fluvinv.inversion.prior import FieldPrior
+
+_TRIES = 200
+
+
+def nonnegative_least_squares(H: np.ndarray, b: np.ndarray) -> np.ndarray:
+    """Minimise u' H u / 2 - b' u under u >= 0, for H symmetric positive definite.
+
+    Block principal pivoting: all unknowns that break a condition change sides at once; when that stops
+    helping, only the last of them does, which ends in finitely many steps (Judice & Pires 1994; Kim & Park
+    2011; from memory).
+
+    Parameters
+    ----------
+    H : (n, n) float array
+    b : (n,) float array
+
+    Returns
+    -------
+    (n,) float array
+
+    Raises
+    ------
+    NumericalError
+        If H cannot be factored or the pivoting does not end.
+    """
+    free = np.ones(b.size, dtype=bool)
+    fewest, patience = b.size + 1, 3
+    for _ in range(_TRIES):
+        u = np.zeros(b.size)
+        index = np.flatnonzero(free)
+        try:
+            u[index] = linalg.solve(H[np.ix_(index, index)], b[index], assume_a="pos", check_finite=False)
+        except linalg.LinAlgError as error:
+            raise NumericalError(
+                "the non-negative inversion met a matrix that is not positive definite"
+            ) from error
+        pull = H @ u - b
+        wrong = np.where(free, u < -1e-12 * np.abs(u).max(initial=0.0), pull < -1e-10 * np.abs(b).max())
+        n_wrong = int(wrong.sum())
+        if n_wrong == 0:
+            return np.maximum(u, 0.0)
+        if n_wrong < fewest:
+            fewest, patience = n_wrong, 3
+        elif patience > 0:
+            patience -= 1
+        else:
+            wrong[: np.flatnonzero(wrong)[-1]] = False
+        free ^= wrong
+    raise NumericalError(f"the non-negative inversion did not settle within {_TRIES} exchanges")
+
+
+def nonnegative_rates(G: sparse.csr_array, y: np.ndarray, prior: FieldPrior, weight: float) -> np.ndarray:
+    """Damped estimate of the rates under u >= 0, with a free background rate.
+
+    Parameters
+    ----------
+    G : (n_rows, n_unknowns) csr array, yr
+    y : (n_rows,) float array, m
+    prior : FieldPrior
+    weight : float, yr
+        Ratio of height error to spread.
+
+    Returns
+    -------
+    (n_unknowns,) float array, m/yr
+    """
+    n_unknowns = G.shape[1]
+    H = np.zeros((n_unknowns, n_unknowns))
+    _kernels.normal_matrix(G.indptr, G.indices, G.data, H)
+    identity_space = np.eye(prior.space.shape[0])
+    identity_time = np.eye(prior.time.shape[0])
+    inverse_space = linalg.cho_solve((prior.space, True), identity_space)
+    inverse_time = linalg.cho_solve((prior.time, True), identity_time)
+    pulled = np.outer(inverse_time.sum(axis=1), inverse_space.sum(axis=1)).ravel()
+    damp = np.kron(inverse_time, inverse_space)
+    damp -= np.outer(pulled, pulled) / pulled.sum()
+    H += weight**2 * damp
+    scale = np.sqrt(np.diag(H))
+    return nonnegative_least_squares(H / np.outer(scale, scale), (G.T @ y) / scale) / scale
+
+
+def truncated_interval(rate: np.ndarray, mean: np.ndarray, sd: np.ndarray, tail: float = 0.025):
+    """Central interval of each Gaussian marginal cut off at zero, stretched to hold the constrained rate.
+
+    Parameters
+    ----------
+    rate : array, m/yr
+        Constrained estimate.
+    mean, sd : arrays of the same shape, m/yr
+        Unconstrained posterior.
+    tail : float
+        Probability left out at either end.
+
+    Returns
+    -------
+    low, high : arrays, m/yr
+
+    Notes
+    -----
+    Each marginal is cut for itself; what the constraint elsewhere adds is not counted.
+    """
+    safe = np.maximum(sd, np.finfo(float).tiny)
+    survival = stats.norm.sf(-mean / safe)
+    high = mean + safe * stats.norm.isf(tail * survival)
+    low = mean + safe * stats.norm.isf((1 - tail) * survival)
+    return np.minimum(np.maximum(low, 0.0), rate), np.maximum(high, rate)
