@@ -108,6 +108,4 @@ def chain_network(x, y, area=1e8, base=(0.0, 0.0)):
     n = len(x)
     receiver = np.arange(n) - 1
     base_x, base_y = np.full(n, base[0]), np.full(n, base[1])
-    return network_from_tree(
-        receiver, np.asarray(x, float), np.asarray(y, float), base_x, base_y, np.full(n, area)
-    )
+    return network_from_tree(receiver, np.asarray(x, float), np.asarray(y, float), base_x, base_y, np.full(n, area))

@@ -1,19 +1,36 @@
 """The inversion: unknowns, exact rows, prior, damping, solution and posterior."""
 
+from fluvinv.inversion.compare import Comparison, compare, history_at_nodes
+from fluvinv.inversion.cost import Cost, predict_cost
 from fluvinv.inversion.invert import Inversion, InversionOptions, invert
 from fluvinv.inversion.sensitivity import sensitivity
 from fluvinv.inversion.solve import DENSE_LIMIT
-from fluvinv.inversion.uplift_grid import UpliftGrid, age_nodes, make_grid, suggest_spacing, suggest_step
+from fluvinv.inversion.uplift_grid import (
+    UpliftGrid,
+    age_nodes,
+    make_grid,
+    nice_number,
+    suggest_ranges,
+    suggest_spacing,
+    suggest_step,
+)
 
 __all__ = [
     "DENSE_LIMIT",
+    "Comparison",
+    "Cost",
     "Inversion",
     "InversionOptions",
     "UpliftGrid",
     "age_nodes",
+    "compare",
+    "history_at_nodes",
     "invert",
     "make_grid",
+    "nice_number",
+    "predict_cost",
     "sensitivity",
+    "suggest_ranges",
     "suggest_spacing",
     "suggest_step",
 ]

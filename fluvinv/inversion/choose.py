@@ -58,13 +58,15 @@ def curvature(spectrum: Spectrum, weight: float) -> float:
 
     .. math:: \kappa = 2 \frac{\eta\rho}{\eta'} \,
         \frac{\lambda^2 \eta' \rho + 2 \lambda \eta \rho + \lambda^4 \eta \eta'}
-             {(\lambda^2 \eta^2 + \rho^2)^{3/2}} .
+             {(\lambda^4 \eta^2 + \rho^2)^{3/2}} .
+
+    (It is often printed with lambda^2 in the denominator, which cannot be: the units do not agree.)
     """
     rho = spectrum.misfit(weight)
     eta = spectrum.roughness(weight)
     slope = -4.0 * weight * float(np.sum(spectrum.loads**2 / (spectrum.values + weight**2) ** 3))
     bend = weight**2 * slope * rho + 2 * weight * eta * rho + weight**4 * eta * slope
-    return 2 * eta * rho / slope * bend / (weight**2 * eta**2 + rho**2) ** 1.5
+    return 2 * eta * rho / slope * bend / (weight**4 * eta**2 + rho**2) ** 1.5
 
 
 def l_curve(spectrum: Spectrum, n_weights: int = 60) -> LCurve:
@@ -95,9 +97,7 @@ def l_curve(spectrum: Spectrum, n_weights: int = 60) -> LCurve:
     bends = np.array([curvature(spectrum, 10**log) for log in logs])
     best = int(np.argmax(bends))
     low, high = logs[max(best - 1, 0)], logs[min(best + 1, n_weights - 1)]
-    found = optimize.minimize_scalar(
-        lambda log: -curvature(spectrum, 10**log), bounds=(low, high), method="bounded"
-    )
+    found = optimize.minimize_scalar(lambda log: -curvature(spectrum, 10**log), bounds=(low, high), method="bounded")
     if not found.success or not np.isfinite(found.fun):
         raise NumericalError(f"the corner of the L-curve was not found: {found.message}")
     weights = 10**logs
@@ -143,9 +143,7 @@ def fixed_damping(spectrum: Spectrum, spread: float, height_sd: float | None) ->
     if height_sd is None:
         scale = np.sqrt(spectrum.y_squared / spectrum.n_rows)
         if scale == 0:
-            raise NumericalError(
-                "the heights carry nothing beyond one constant rate: no height error can be estimated"
-            )
+            raise NumericalError("the heights carry nothing beyond one constant rate: no height error can be estimated")
 
         def cost(log):
             return -spectrum.log_evidence(10**log * scale / spread, 10**log * scale)

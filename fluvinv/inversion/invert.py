@@ -68,6 +68,8 @@ class Inversion:
         Squared share of the averaging kernel within one map node and one age node.
     fitted : (n_nodes,) float array, m
         Fitted height above base level.
+    background : float, m/yr
+        The free background rate (of the fit without a bound on the rates).
     damping : Damping
     curve : LCurve or None
     method : str
@@ -87,6 +89,7 @@ class Inversion:
     sampled: np.ndarray
     share: np.ndarray
     fitted: np.ndarray
+    background: float
     damping: Damping
     curve: LCurve | None
     method: str
@@ -110,12 +113,16 @@ class Inversion:
         return chosen.reshape(self.sampled.shape)
 
 
+def _ignore(_step: str) -> None:
+    """Take no notice of progress."""
+
+
 def invert(
     network: RiverNetwork,
     tau: np.ndarray,
     grid: UpliftGrid,
     options: InversionOptions,
-    progress: Callable[[str], None] = lambda step: None,
+    progress: Callable[[str], None] = _ignore,
 ) -> Inversion:
     """Recover the uplift history of a network.
 
@@ -150,7 +157,7 @@ def invert(
     prior = make_prior(grid, options.range_space, options.range_time)
     spectrum, damping, curve = _decompose_and_choose(rows, y, tau[used], prior, options, progress)
     progress("errors")
-    estimate = spectrum.solution(damping.weight)
+    estimate, background = spectrum.solution(damping.weight)
     sd = standard_deviation(spectrum, damping, grid, np.eye(grid.n_ages))
     mean = estimate.reshape(sd.shape)
     if options.allow_subsidence:
@@ -159,9 +166,7 @@ def invert(
         rate = _nonnegative(rows, y, prior, damping, grid).reshape(sd.shape)
         low, high = truncated_interval(rate, mean, sd)
     if not np.all(np.isfinite(rate)):
-        raise NumericalError(
-            "the inversion gave rates that are not finite; the damping is too weak for this grid"
-        )
+        raise NumericalError("the inversion gave rates that are not finite; the damping is too weak for this grid")
     mix = cumulative_mix(grid.ages)
     fitted = G @ rate.ravel()
     freedom = used.size - spectrum.effective_parameters(damping.weight)
@@ -176,6 +181,7 @@ def invert(
         sampled=np.asarray(G.sum(axis=0)).reshape(sd.shape),
         share=kernel_share(spectrum, damping, grid),
         fitted=fitted,
+        background=background,
         damping=damping,
         curve=curve,
         method=spectrum.method,

@@ -39,9 +39,7 @@ def nonnegative_least_squares(H: np.ndarray, b: np.ndarray) -> np.ndarray:
         try:
             u[index] = linalg.solve(H[np.ix_(index, index)], b[index], assume_a="pos", check_finite=False)
         except linalg.LinAlgError as error:
-            raise NumericalError(
-                "the non-negative inversion met a matrix that is not positive definite"
-            ) from error
+            raise NumericalError("the non-negative inversion met a matrix that is not positive definite") from error
         pull = H @ u - b
         wrong = np.where(free, u < -1e-12 * np.abs(u).max(initial=0.0), pull < -1e-10 * np.abs(b).max())
         n_wrong = int(wrong.sum())

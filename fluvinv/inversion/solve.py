@@ -70,18 +70,24 @@ class Spectrum:
     def misfit(self, weight: float) -> float:
         """|y - G u|^2 (m2)."""
         share = self.values + 2 * weight**2
-        return max(
-            0.0, self.y_squared - float(np.sum(self.loads**2 * share / (self.values + weight**2) ** 2))
-        )
+        return max(0.0, self.y_squared - float(np.sum(self.loads**2 * share / (self.values + weight**2) ** 2)))
 
     def roughness(self, weight: float) -> float:
         """|w|^2, the prior's norm of the departure from the background ((m/yr)^2)."""
         return float(np.sum((self.loads / (self.values + weight**2)) ** 2))
 
-    def solution(self, weight: float) -> np.ndarray:
-        """(n_unknowns,) float array, m/yr: the damped estimate of the rates, background included."""
+    def solution(self, weight: float) -> tuple[np.ndarray, float]:
+        """Damped estimate of the rates.
+
+        Returns
+        -------
+        rate : (n_unknowns,) float array, m/yr
+            Background included.
+        background : float, m/yr
+        """
         field = self.prior.root(self.vectors @ (self.loads / (self.values + weight**2)))
-        return self.background_rate + field - float(self.background_row @ field)
+        background = self.background_rate - float(self.background_row @ field)
+        return background + field, background
 
     def log_evidence(self, weight: float, height_sd: float) -> float:
         """Log marginal likelihood of the heights, with a flat prior on the background rate.
@@ -89,9 +95,7 @@ class Spectrum:
         A constant in the settings of one network, it compares damping and noise numbers, nothing else.
         """
         chi_square = (self.misfit(weight) + weight**2 * self.roughness(weight)) / height_sd**2
-        log_det = (self.n_rows - 1) * np.log(2 * np.pi * height_sd**2) + np.sum(
-            np.log1p(self.values / weight**2)
-        )
+        log_det = (self.n_rows - 1) * np.log(2 * np.pi * height_sd**2) + np.sum(np.log1p(self.values / weight**2))
         return -0.5 * float(chi_square + log_det + np.log(self.tau_squared))
 
 
@@ -178,6 +182,4 @@ def _leading_directions(G, background_row, tau_squared, prior, rank, seed):
     try:
         return eigsh(operator, k=min(rank, n_unknowns - 1), which="LA", v0=start, tol=1e-8)
     except ArpackError as error:
-        raise NumericalError(
-            f"the iterative eigensolver did not converge on {n_unknowns} unknowns: {error}"
-        ) from error
+        raise NumericalError(f"the iterative eigensolver did not converge on {n_unknowns} unknowns: {error}") from error

@@ -161,3 +161,13 @@ def suggest_spacing(area: float, n_places: int = 220) -> float:
 def suggest_step(longest: float, n_steps: int = 12) -> float:
     """Age step (yr) that divides the longest travel time (yr) into about `n_steps`."""
     return nice_number(longest / n_steps)
+
+
+def suggest_ranges(network: RiverNetwork, tau: np.ndarray) -> tuple[float, float]:
+    """Ranges of the prior in space (m) and time (yr) where the user states none.
+
+    Half the width of the drained area (its square root), and half the longest travel time: histories that
+    are smooth over a good part of what the rivers can see. This is a choice, not a finding.
+    """
+    area = float(network.area[network.outlet].sum())
+    return 0.5 * np.sqrt(area), 0.5 * float(tau.max())

@@ -1,0 +1,174 @@
+"""Rasters: the DEM in, stacks of maps out (cloud-optimised GeoTIFF)."""
+
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+import pyproj
+import rasterio
+import rasterio.shutil
+from affine import Affine
+from rasterio.errors import NotGeoreferencedWarning, RasterioError, RasterioIOError
+from rasterio.io import MemoryFile
+
+from fluvinv import __version__
+from fluvinv.errors import InputError, OutputError
+from fluvinv.files.cautions import CAUTIONS
+from fluvinv.inversion import UpliftGrid
+from fluvinv.terrain import Grid
+from fluvinv.units import yr_to_myr
+
+
+@dataclass(frozen=True, slots=True)
+class History:
+    """An uplift history read from a stack.
+
+    Attributes
+    ----------
+    ages : (n_ages,) float array, yr, ascending
+    x, y : (n_cols,) and (n_rows,) float arrays, m
+        Map nodes, y from north to south.
+    rate : (n_ages, n_rows, n_cols) float array, m/yr
+    crs : pyproj.CRS
+    """
+
+    ages: np.ndarray
+    x: np.ndarray
+    y: np.ndarray
+    rate: np.ndarray
+    crs: pyproj.CRS
+
+
+def _open(path: Path):
+    if not path.exists():
+        raise InputError(f"{path}: no such file.")
+    if path.is_dir():
+        raise InputError(f"{path}: a folder, and a raster file is expected.")
+    try:
+        return rasterio.open(path)
+    except (RasterioIOError, NotGeoreferencedWarning) as error:
+        raise InputError(f"{path}: cannot be read as a raster (GeoTIFF or another format that GDAL knows).") from error
+
+
+def read_dem(path: Path) -> Grid:
+    """Read a DEM of one band on a regular grid that is not rotated.
+
+    Parameters
+    ----------
+    path : Path
+
+    Returns
+    -------
+    Grid
+        Row 0 is the northernmost, whatever the file's order.
+
+    Raises
+    ------
+    InputError
+        If the file is missing, no raster, has no CRS, several bands, a rotated grid or infinite heights.
+    """
+    with rasterio.Env(), _open(path) as source:
+        if source.count != 1:
+            raise InputError(f"{path}: has {source.count} bands, and a DEM of one band is expected.")
+        if source.crs is None:
+            raise InputError(
+                f"{path}: has no coordinate reference system. Assign the one it was made in, then try again."
+            )
+        transform = source.transform
+        if transform.b or transform.d:
+            raise InputError(f"{path}: the grid is rotated. Warp it to one that runs north-south, then try again.")
+        if transform.is_identity:
+            raise InputError(f"{path}: has no georeference (cell size and position).")
+        try:
+            masked = source.read(1, masked=True)
+            crs = pyproj.CRS.from_user_input(source.crs.to_wkt())
+        except (RasterioError, pyproj.exceptions.CRSError) as error:
+            raise InputError(f"{path}: damaged, the heights or their CRS cannot be read.") from error
+    height = np.ma.filled(masked.astype(np.float32), np.nan)
+    if np.isinf(height).any():
+        raise InputError(f"{path}: holds {int(np.isinf(height).sum())} infinite heights.")
+    x = transform.c + transform.a * (np.arange(height.shape[1]) + 0.5)
+    y = transform.f + transform.e * (np.arange(height.shape[0]) + 0.5)
+    if transform.e > 0:
+        height, y = height[::-1], y[::-1]
+    if transform.a < 0:
+        height, x = height[:, ::-1], x[::-1]
+    return Grid(height=np.ascontiguousarray(height), void=np.isnan(height), x=x.copy(), y=y.copy(), crs=crs)
+
+
+def read_history(path: Path) -> History:
+    """Read a stack of uplift rates: one band per age, the age (Ma) in each band's tag `age_ma`.
+
+    Raises
+    ------
+    InputError
+        If the file cannot be read, has no CRS, or its bands do not tell their ages in ascending order.
+    """
+    with rasterio.Env(), _open(path) as source:
+        tags = [source.tags(band).get("age_ma") for band in source.indexes]
+        try:
+            ages = np.array([float(tag) for tag in tags]) * 1e6
+        except (TypeError, ValueError) as error:
+            raise InputError(f"{path}: every band needs a tag age_ma with its age in Ma; found {tags[:3]}.") from error
+        if source.crs is None or np.any(np.diff(ages) <= 0):
+            raise InputError(f"{path}: an uplift stack needs a CRS and bands of ascending age.")
+        transform = source.transform
+        if transform.b or transform.d or transform.e > 0:
+            raise InputError(f"{path}: an uplift stack runs north-south, its first row in the north.")
+        rate = np.ma.filled(source.read(masked=True).astype(float), np.nan) * 1e-3
+        crs = pyproj.CRS.from_user_input(source.crs.to_wkt())
+    x = transform.c + transform.a * (np.arange(rate.shape[2]) + 0.5)
+    y = transform.f + transform.e * (np.arange(rate.shape[1]) + 0.5)
+    return History(ages, x, y, rate, crs)
+
+
+def write_stack(
+    path: Path, maps: np.ndarray, grid: UpliftGrid, crs: pyproj.CRS, quantity: str, unit: str, dtype: str = "float32"
+) -> None:
+    """Write one band per age, youngest first, as a cloud-optimised GeoTIFF.
+
+    Parameters
+    ----------
+    path : Path
+    maps : (n_ages, n_rows, n_cols) array
+        NaN (float32) or 255 (uint8) where there is nothing.
+    grid : UpliftGrid
+        Cell centres are its map nodes.
+    crs : pyproj.CRS
+    quantity, unit : str
+        For band descriptions and tags; an empty unit for shares and flags.
+    dtype : str
+        "float32" or "uint8".
+
+    Raises
+    ------
+    OutputError
+        If the file cannot be written.
+    """
+    half = 0.5 * grid.spacing
+    profile = {
+        "driver": "GTiff",
+        "dtype": dtype,
+        "count": maps.shape[0],
+        "height": grid.n_rows,
+        "width": grid.n_cols,
+        "crs": crs.to_wkt(),
+        "transform": Affine(grid.spacing, 0, grid.west - half, 0, -grid.spacing, grid.north + half),
+        "nodata": 255 if dtype == "uint8" else np.nan,
+    }
+    try:
+        with rasterio.Env(), MemoryFile() as memory:
+            with memory.open(**profile) as target:
+                target.write(maps.astype(dtype))
+                target.update_tags(
+                    quantity=quantity, unit=unit, software=f"fluvinv {__version__}", cautions=" ".join(CAUTIONS)
+                )
+                for band, age in enumerate(yr_to_myr(grid.ages), start=1):
+                    target.update_tags(band, age_ma=f"{age:.10g}", quantity=quantity, unit=unit)
+                    suffix = f" ({unit})" if unit else ""
+                    target.set_band_description(band, f"{quantity} at {age:.6g} Ma{suffix}")
+                    target.set_band_unit(band, unit)
+            with memory.open() as source:
+                rasterio.shutil.copy(source, path, driver="COG", compress="DEFLATE", blocksize=256, overviews="NONE")
+    except RasterioError as error:
+        raise OutputError(f"{path}: cannot be written: {error}.") from error

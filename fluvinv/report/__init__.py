@@ -1,0 +1,1 @@
+"""What people look at: figures and the summary in words."""

@@ -1,0 +1,127 @@
+"""The result in words: for the terminal and for the record."""
+
+import textwrap
+
+import numpy as np
+
+from fluvinv.inversion import Comparison, Inversion
+from fluvinv.network import RiverNetwork
+from fluvinv.units import m2_to_km2, m_per_yr_to_mm_per_yr, m_to_km, yr_to_myr
+
+_WIDTH = 100
+
+
+def verdict(result: Inversion) -> list[str]:
+    """What was found, in sentences; averages are over resolved nodes."""
+    grid, resolved = result.grid, result.resolved
+    if not resolved.any():
+        return [
+            "Nowhere does the estimate average the truth within one map node and one age node: no rate is resolved."
+        ]
+    judged = result.well_sampled
+    sentences = [f"{resolved[judged].mean():.0%} of the well-sampled nodes are resolved (map node and age node)."]
+    ages = yr_to_myr(grid.ages)
+    enough = resolved.sum(axis=1) >= max(3, 0.1 * resolved.sum(axis=1).max())
+    if enough.any():
+        oldest = ages[np.flatnonzero(enough)[-1]]
+        sentences.append(
+            f"Resolved nodes reach back to {oldest:.3g} Ma at a tenth or more of the best-covered age's places."
+        )
+    rates = m_per_yr_to_mm_per_yr(result.rate)
+    share = result.rate_sd[resolved] / np.maximum(np.abs(result.rate[resolved]), 1e-30)
+    sentences.append(
+        f"Resolved rates run from {_plain(np.quantile(rates[resolved], 0.05))} to {_plain(np.quantile(rates[resolved], 0.95))}"
+        f" mm/yr (5 to 95 % of nodes), with a median standard deviation of {np.median(share):.0%} of the rate."
+    )
+    masked = np.where(resolved, rates, -np.inf)
+    age, place = np.unravel_index(np.argmax(masked), rates.shape)
+    x, y = grid.place_xy[place]
+    sd = m_per_yr_to_mm_per_yr(result.rate_sd[age, place])
+    sentences.append(
+        f"The highest resolved rate, {_plain(rates[age, place])} ± {_plain(sd)} mm/yr, stands at"
+        f" {ages[age]:.3g} Ma at x {x:,.0f} m, y {y:,.0f} m."
+    )
+    return sentences
+
+
+def _plain(value: float) -> str:
+    """A number to three figures, without an exponent."""
+    digits = 3 - int(np.floor(np.log10(abs(value)))) - 1 if value else 2
+    return f"{value:.{min(max(digits, 0), 8)}f}"
+
+
+def _entry(label: str, text: str) -> list[str]:
+    """A label and its text, wrapped and indented."""
+    lines = textwrap.wrap(text, _WIDTH - 13) or [""]
+    return [f"{label:<12} {lines[0]}"] + [f"{'':<12} {line}" for line in lines[1:]]
+
+
+def network_lines(network: RiverNetwork, channel_area: float, dropped: dict, chosen: bool) -> list[str]:
+    """The network in two lines."""
+    how = "chosen from the DEM" if chosen else "as set"
+    lines = _entry(
+        "Rivers",
+        f"{network.n_nodes:,} nodes on {network.n_rivers:,} rivers in {network.n_basins:,} basins; channels begin at"
+        f" {m2_to_km2(channel_area):.3g} km² of upstream area ({how}); longest river {m_to_km(network.distance.max()):,.0f} km.",
+    )
+    left_out = sum(dropped.values())
+    if left_out:
+        reasons = ", ".join(f"{count:,} {reason.replace('_', ' ')}" for reason, count in dropped.items() if count)
+        lines += _entry("Left out", f"{left_out:,} channel nodes: {reasons}.")
+    return lines
+
+
+def clock_lines(erodibility: float, area_exponent: float, longest: float) -> list[str]:
+    """What sets the clock."""
+    unit = f"m^{1 - 2 * area_exponent:.3g}/yr" if area_exponent != 0.5 else "1/yr"
+    return _entry(
+        "Clock",
+        f"erodibility {erodibility:.4g} {unit} at area exponent {area_exponent:g} was given, not found: heights alone"
+        " cannot tell it, and another value a times as large fits as well with rates times a and ages over a."
+        f" The longest travel time is {yr_to_myr(longest):.3g} Myr.",
+    )
+
+
+def inversion_lines(result: Inversion, rms: float, choose: str, ranges: tuple[float, float]) -> list[str]:
+    """Unknowns, damping and fit."""
+    grid, damping = result.grid, result.damping
+    lines = _entry(
+        "Unknowns",
+        f"{grid.n_unknowns:,}: {grid.n_places:,} map nodes {m_to_km(grid.spacing):g} km apart times {grid.n_ages} ages"
+        f" {yr_to_myr(grid.ages[1]):g} Myr apart; {result.method} solver.",
+    )
+    how = {"l-curve": "corner of the L-curve", "fixed": "fixed by the settings"}[choose]
+    lines += _entry(
+        "Damping",
+        f"{how}: rates vary by {_plain(m_per_yr_to_mm_per_yr(damping.spread))} mm/yr about a background of"
+        f" {_plain(m_per_yr_to_mm_per_yr(result.background))} mm/yr, over ranges of {m_to_km(ranges[0]):.3g} km and"
+        f" {yr_to_myr(ranges[1]):.3g} Myr.",
+    )
+    return lines + _entry(
+        "Fit",
+        f"rms misfit {rms:.3g} m, height error {damping.height_sd:.3g} m taken as white; the heights determine about"
+        f" {result.effective_parameters:.0f} numbers; reduced chi-square {result.reduced_chi_square:.3g}.",
+    )
+
+
+def comparison_line(comparison: Comparison) -> list[str]:
+    """How the recovered history compares with the known one."""
+    shape = (
+        f"correlation {comparison.correlation:.3f}, skill {comparison.skill:.2f}, "
+        if comparison.correlation is not None
+        else "the known history does not vary, so no correlation; "
+    )
+    return _entry(
+        "Comparison",
+        f"against the known history at the {comparison.n_nodes:,} nodes that hold 90 % of all path time: {shape}"
+        f"rms error {_plain(m_per_yr_to_mm_per_yr(comparison.rmse))} mm/yr; the stated 95 % intervals hold the known rate"
+        f" at {comparison.cover:.0%} of them.",
+    )
+
+
+def entry(label: str, sentences: list[str]) -> list[str]:
+    """A labelled list of sentences."""
+    lines: list[str] = []
+    for number, sentence in enumerate(sentences):
+        lines += _entry(label if number == 0 else "", sentence)
+    return lines

@@ -1,0 +1,212 @@
+"""The inversion against dense linear algebra, and what its statements mean."""
+
+import numpy as np
+import pytest
+from trees import random_network
+
+from fluvinv.errors import NumericalError
+from fluvinv.inversion import InversionOptions, age_nodes, invert, make_grid, sensitivity
+from fluvinv.inversion import invert as invert_function
+from fluvinv.inversion.choose import Damping, fixed_damping, l_curve
+from fluvinv.inversion.posterior import cumulative_mix, kernel_share, standard_deviation
+from fluvinv.inversion.prior import exponential_correlation, make_prior, matern_correlation
+from fluvinv.inversion.solve import decompose
+from fluvinv.streampower import travel_time
+
+HEIGHT, SPREAD = 3.0, 1e-4
+
+
+class Problem:
+    """A small problem with its dense counterpart: the background rate is one more column with a flat prior."""
+
+    def __init__(self, seed=3):
+        self.network = random_network(260, seed)
+        self.tau = travel_time(self.network, 1e-6, 0.5)
+        self.grid = make_grid(self.network, 1e4, age_nodes(self.tau.max() / 4, self.tau.max()))
+        self.G = sensitivity(self.network, self.tau, self.grid)
+        self.prior = make_prior(self.grid, 3e4, 1.5e6)
+        n = self.grid.n_unknowns
+        root = self.prior.root(np.eye(n))
+        self.correlation = root @ root.T
+        rng = np.random.default_rng(seed)
+        self.truth = 3e-4 + SPREAD * root @ rng.standard_normal(n)
+        self.y = self.G @ self.truth + HEIGHT * rng.standard_normal(self.network.n_nodes)
+        self.spectrum = decompose(self.G, self.y, self.tau, self.prior)
+        self.damping = Damping(HEIGHT / SPREAD, HEIGHT, SPREAD)
+        columns = np.column_stack([self.G.toarray(), self.tau])
+        precision = np.zeros((n + 1, n + 1))
+        precision[:n, :n] = np.linalg.inv(self.correlation) / SPREAD**2
+        to_rate = np.column_stack([np.eye(n), np.ones(n)])
+        posterior = np.linalg.inv(columns.T @ columns / HEIGHT**2 + precision)
+        self.rate = to_rate @ posterior @ (columns.T @ self.y) / HEIGHT**2
+        self.covariance = to_rate @ posterior @ to_rate.T
+        self.kernel = to_rate @ posterior @ columns.T @ self.G.toarray() / HEIGHT**2
+        self.trace = np.trace(columns @ posterior @ columns.T) / HEIGHT**2
+
+
+@pytest.fixture(scope="module")
+def problem():
+    return Problem()
+
+
+def test_solution_equals_dense_algebra(problem):
+    rate, _ = problem.spectrum.solution(problem.damping.weight)
+    np.testing.assert_allclose(rate, problem.rate, atol=1e-9 * np.abs(problem.rate).max() * 1e3)
+    residual = problem.y - problem.G @ rate
+    assert problem.spectrum.misfit(problem.damping.weight) == pytest.approx(residual @ residual, rel=1e-8)
+    assert problem.spectrum.effective_parameters(problem.damping.weight) == pytest.approx(problem.trace, rel=1e-8)
+
+
+def test_posterior_deviation_equals_dense_algebra(problem):
+    """Check value 4.17 (Tarantola 2005, eq. 3.37-3.38; from memory; identity)."""
+    sd = standard_deviation(problem.spectrum, problem.damping, problem.grid, np.eye(problem.grid.n_ages))
+    np.testing.assert_allclose(sd.ravel(), np.sqrt(np.diag(problem.covariance)), rtol=1e-7)
+
+
+def test_both_forms_of_the_posterior_agree(problem):
+    """(G'G/s^2 + P)^-1 = C - C G'(G C G' + s^2)^-1 G C (check value 4.17): data space against ours, wide background."""
+    wide = 1e4 * SPREAD
+    C = SPREAD**2 * problem.correlation + wide**2
+    G = problem.G.toarray()
+    S = G @ C @ G.T + HEIGHT**2 * np.eye(G.shape[0])
+    data_space = C - C @ G.T @ np.linalg.solve(S, G @ C)
+    ours = standard_deviation(problem.spectrum, problem.damping, problem.grid, np.eye(problem.grid.n_ages)).ravel()
+    np.testing.assert_allclose(ours, np.sqrt(np.diag(data_space)), rtol=1e-3)
+    assert np.all(np.diag(problem.covariance) <= np.diag(C))
+
+
+def test_cumulative_deviation_equals_dense_algebra(problem):
+    mix = cumulative_mix(problem.grid.ages)
+    B = np.kron(mix, np.eye(problem.grid.n_places))
+    expected = np.sqrt(np.maximum(np.diag(B @ problem.covariance @ B.T), 0))
+    ours = standard_deviation(problem.spectrum, problem.damping, problem.grid, mix).ravel()
+    np.testing.assert_allclose(ours, expected, atol=1e-6 * expected.max())
+
+
+def test_cumulative_uplift_is_the_integral_of_the_rate(problem):
+    """Trapezoids are exact for piecewise linear rates; numpy integrates the same function on a fine grid."""
+    ages = problem.grid.ages
+    rates = np.random.default_rng(1).uniform(0, 1e-3, ages.size)
+    fine = np.linspace(0, ages[-1], 40_001)
+    total = np.trapezoid(np.interp(fine, ages, rates), fine)
+    assert (cumulative_mix(ages) @ rates)[-1] == pytest.approx(total, rel=1e-6)
+
+
+def test_kernel_share_equals_dense_algebra(problem):
+    grid = problem.grid
+    rows, cols = np.nonzero(grid.place >= 0)
+    age, place = np.divmod(np.arange(grid.n_unknowns), grid.n_places)
+    squares = problem.kernel**2
+    near = (
+        (np.abs(rows[place][:, None] - rows[place]) <= 1)
+        & (np.abs(cols[place][:, None] - cols[place]) <= 1)
+        & (np.abs(age[:, None] - age) <= 1)
+    )
+    expected = (squares * near).sum(axis=1) / squares.sum(axis=1)
+    ours = kernel_share(problem.spectrum, problem.damping, grid).ravel()
+    np.testing.assert_allclose(ours, expected, atol=1e-6)
+
+
+def test_averaging_kernels_of_a_constant_sum_to_one(problem):
+    """The background is free, so a constant rate comes back as it is (check value 4.4)."""
+    np.testing.assert_allclose(problem.kernel.sum(axis=1), 1.0, rtol=1e-6)
+    flat = decompose(problem.G, 2e-4 * problem.tau, problem.tau, problem.prior)
+    np.testing.assert_allclose(flat.solution(problem.damping.weight)[0], 2e-4, rtol=1e-9)
+
+
+def test_evidence_equals_dense_algebra(problem):
+    """log p(y) with a flat background: compared with the density of y under a very wide background."""
+    G, wide = problem.G.toarray(), 1e3
+    S = SPREAD**2 * G @ problem.correlation @ G.T + HEIGHT**2 * np.eye(G.shape[0])
+    S += wide**2 * np.outer(problem.tau, problem.tau)
+    _, log_det = np.linalg.slogdet(2 * np.pi * S)
+    density = -0.5 * (log_det + problem.y @ np.linalg.solve(S, problem.y))
+    flat = density + 0.5 * np.log(2 * np.pi * wide**2)
+    ours = problem.spectrum.log_evidence(problem.damping.weight, HEIGHT)
+    assert ours == pytest.approx(flat, abs=0.05)
+
+
+def test_iterative_solver_equals_dense(problem):
+    iterative = decompose(problem.G, problem.y, problem.tau, problem.prior, rank=250)
+    weight = problem.damping.weight
+    np.testing.assert_allclose(iterative.solution(weight)[0], problem.spectrum.solution(weight)[0], atol=1e-8)
+    np.testing.assert_allclose(iterative.values, problem.spectrum.values[:250], rtol=1e-6)
+
+
+def test_large_grids_go_to_the_iterative_solver(problem, monkeypatch):
+    module = __import__("sys").modules["fluvinv.inversion.invert"]
+    network = problem.network
+    object.__setattr__(network, "height", problem.y)
+    options = InversionOptions(3e4, 1.5e6, choose="fixed", spread=SPREAD, height_sd=HEIGHT)
+    dense = invert_function(network, problem.tau, problem.grid, options)
+    monkeypatch.setattr(module, "DENSE_LIMIT", 100)
+    monkeypatch.setattr(module, "_FIRST_RANK", 100)
+    iterative = invert_function(network, problem.tau, problem.grid, options)
+    assert (dense.method, iterative.method) == ("dense", "iterative")
+    assert np.abs(iterative.rate - dense.rate).max() < 0.2 * dense.rate_sd.min()
+    np.testing.assert_allclose(iterative.rate_sd, dense.rate_sd, rtol=0.05)
+
+
+def test_height_error_is_recovered_by_evidence(problem):
+    found = fixed_damping(problem.spectrum, SPREAD, None)
+    assert found.height_sd == pytest.approx(HEIGHT, rel=0.15)
+
+
+def test_intervals_hold_the_truth_drawn_from_the_prior():
+    """Truths drawn from the prior, noise as stated: 95 % intervals hold about 95 % (pooled over 12 seeds)."""
+    inside = []
+    for seed in range(12):
+        case = Problem(seed)
+        sd = standard_deviation(case.spectrum, case.damping, case.grid, np.eye(case.grid.n_ages)).ravel()
+        inside.append(np.mean(np.abs(case.spectrum.solution(case.damping.weight)[0] - case.truth) < 1.96 * sd))
+    assert 0.90 < np.mean(inside) < 0.985
+
+
+def test_correlations_at_known_points():
+    """kappa d K_1(kappa d): 1 at 0; at the range sqrt(8) K_1(sqrt(8)) = 0.1396 (Lindgren et al. 2011 say about 0.13)."""
+    assert matern_correlation(np.array([0.0]), 10.0)[0] == 1.0
+    assert matern_correlation(np.array([10.0]), 10.0)[0] == pytest.approx(0.13962, abs=1e-4)
+    assert exponential_correlation(5.0, 5.0) == pytest.approx(np.exp(-2), rel=1e-12)
+
+
+def test_l_curve_falls_and_rises(problem):
+    """Misfit grows and roughness falls with the weight, monotonically (identity)."""
+    curve = l_curve(problem.spectrum)
+    assert np.all(np.diff(curve.misfit_norm) > 0)
+    assert np.all(np.diff(curve.rough_norm) < 0)
+
+
+def test_rates_held_non_negative():
+    """Where the unconstrained fit subsides, the constrained one stops at zero and its interval begins there."""
+    case = Problem(4)
+    heights = case.G @ np.where(case.truth > np.quantile(case.truth, 0.4), case.truth, 0.0)
+    object.__setattr__(case.network, "height", heights)
+    options = InversionOptions(3e4, 1.5e6, choose="fixed", spread=3e-4, height_sd=2.0)
+    free = invert(case.network, case.tau, case.grid, options)
+    held = invert(case.network, case.tau, case.grid, InversionOptions(3e4, 1.5e6, "fixed", 3e-4, 2.0, False))
+    assert free.rate.min() < 0
+    assert held.rate.min() == 0.0
+    assert held.low.min() >= 0.0
+    assert np.all(held.low <= held.rate) and np.all(held.rate <= held.high)
+
+
+def test_no_heights_no_inversion(problem):
+    with pytest.raises(NumericalError, match="nothing to invert"):
+        decompose(problem.G, problem.y, np.zeros_like(problem.tau), problem.prior)
+
+
+def test_halving_spacing_and_step_keeps_the_answer():
+    """The prior is one on functions: with its numbers fixed, a grid twice as fine moves rates by less than sd/2."""
+    case = Problem(7)
+    network, tau = case.network, case.tau
+    object.__setattr__(network, "height", case.y)
+    options = InversionOptions(3e4, 1.5e6, choose="fixed", spread=SPREAD, height_sd=HEIGHT)
+    coarse_grid = make_grid(network, 6e3, age_nodes(tau.max() / 8, tau.max()))
+    fine_grid = make_grid(network, 3e3, age_nodes(tau.max() / 16, tau.max()))
+    coarse = invert(network, tau, coarse_grid, options)
+    fine = invert(network, tau, fine_grid, options)
+    at = {tuple(xy): i for i, xy in enumerate(fine_grid.place_xy)}
+    common = [(i, at[tuple(xy)]) for i, xy in enumerate(coarse_grid.place_xy) if tuple(xy) in at]
+    here, there = np.array(common).T
+    change = np.abs(fine.rate[::2][:, there] - coarse.rate[:, here]) / coarse.rate_sd[:, here]
+    assert np.mean(change[coarse.well_sampled[:, here]] < 0.5) > 0.95
