@@ -66,7 +66,7 @@ def lay_out(settings: Settings, network: RiverNetwork, tau: np.ndarray, dem: Gri
 def _spacing(settings: Settings, network: RiverNetwork, dem: Grid) -> float:
     """Map spacing (m), checked against the cell size and the extent."""
     wanted = settings.uplift_grid.spacing_km
-    cell = float(np.median(dem.step_east_west()))
+    cell = float(np.median(dem.step_lengths().south))
     extent = max(np.ptp(network.map_x), np.ptp(network.map_y), cell)
     if wanted == "auto":
         return min(max(suggest_spacing(float(network.area[network.outlet].sum())), cell), extent)

@@ -17,7 +17,7 @@ def plain(A, b) -> Spectrum:
     values, vectors = np.linalg.eigh(A.T @ A)
     n = A.shape[1]
     return Spectrum(
-        prior=FieldPrior(space=np.eye(n), time=np.eye(1)),
+        prior=FieldPrior(np.eye(n), np.eye(1), np.eye(n), np.eye(1), np.arange(n)),
         values=np.maximum(values[::-1], 0),
         vectors=vectors[:, ::-1],
         loads=vectors[:, ::-1].T @ (A.T @ b),

@@ -1,6 +1,7 @@
 """Rows of the sensitivity matrix against brute force, identities and special cases."""
 
 from importlib import import_module
+from itertools import pairwise
 
 import numpy as np
 import pytest
@@ -32,7 +33,7 @@ def brute_force_row(network, tau, grid, node):
             cuts = (tau[node] - grid.ages - t0) / (tau[i] - t0)
             shares += [s for s in cuts if 0 < s < 1]
         shares = np.unique(shares)
-        for s0, s1 in zip(shares[:-1], shares[1:], strict=True):
+        for s0, s1 in pairwise(shares):
             for g, w in zip(GAUSS_X, GAUSS_W, strict=True):
                 s = 0.5 * (s0 + s1) + 0.5 * g * (s1 - s0)
                 weight = 0.5 * w * (s1 - s0) * (tau[i] - t0)
@@ -144,7 +145,8 @@ def test_grid_snaps_to_multiples_of_its_spacing():
     grid = make_grid(network, 3000.0, age_nodes(1e5, 1e6))
     assert np.all(grid.x % 3000.0 == 0)
     assert np.all(grid.y % 3000.0 == 0)
-    assert grid.x[0] <= network.map_x.min() and grid.x[-1] >= network.map_x.max()
+    assert grid.x[0] <= network.map_x.min()
+    assert grid.x[-1] >= network.map_x.max()
 
 
 def test_uniform_history_gives_heights_rate_times_travel_time():

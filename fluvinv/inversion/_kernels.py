@@ -1,4 +1,4 @@
-"""Compiled loops of the inversion: rows of the sensitivity matrix, and its normal matrix.
+"""Compiled loops of the inversion: rows of the sensitivity matrix.
 
 Positions are in grid units: u counts columns eastward and v counts rows southward from the north-west map
 node, so that map lines are the whole numbers. A segment is the part of a path inside one map cell, from the
@@ -290,14 +290,3 @@ def count_downstream(receiver, depth):
     for node in range(receiver.size):
         if receiver[node] >= 0:
             depth[node] = depth[receiver[node]] + 1
-
-
-@njit(cache=True)
-def normal_matrix(indptr, indices, data, out):
-    """Add G' G to the dense matrix `out`, row by row of the sparse G."""
-    for row in range(indptr.size - 1):
-        for a in range(indptr[row], indptr[row + 1]):
-            i = indices[a]
-            value = data[a]
-            for b in range(indptr[row], indptr[row + 1]):
-                out[i, indices[b]] += value * data[b]

@@ -19,6 +19,9 @@ from fluvinv.network import RiverNetwork
 #: Half width of a 95 % interval in standard deviations.
 Z95 = 1.959963984540054
 
+#: Rates that must not be negative are solved for, without modes, up to this many unknowns.
+MOST_NON_NEGATIVE = 8000
+
 _FIRST_RANK, _LAST_RANK = 400, 1600
 #: Directions left out by the iterative solver may have filter factors up to this.
 _LEFT_OUT = 0.05
@@ -179,7 +182,7 @@ def invert(
         cumulative=mix @ rate,
         cumulative_sd=standard_deviation(spectrum, damping, grid, mix),
         sampled=np.asarray(G.sum(axis=0)).reshape(sd.shape),
-        share=kernel_share(spectrum, damping, grid),
+        share=kernel_share(rows, spectrum, damping, grid),
         fitted=fitted,
         background=background,
         damping=damping,
@@ -194,7 +197,7 @@ def invert(
 
 def _decompose_and_choose(rows, y, tau, prior: FieldPrior, options: InversionOptions, progress):
     """Decompose with all directions, or with as many as the chosen damping needs."""
-    rank = None if rows.shape[1] <= DENSE_LIMIT else _FIRST_RANK
+    rank = None if prior.n_modes <= DENSE_LIMIT else _FIRST_RANK
     while True:
         spectrum = decompose(rows, y, tau, prior, rank=rank, seed=options.seed)
         progress("damping")
@@ -203,8 +206,8 @@ def _decompose_and_choose(rows, y, tau, prior: FieldPrior, options: InversionOpt
             return spectrum, damping, curve
         if rank >= _LAST_RANK:
             raise NumericalError(
-                f"the heights determine more than {rank} numbers of this grid of {rows.shape[1]} unknowns. Choose a"
-                f" coarser grid (at most {DENSE_LIMIT} unknowns are solved whole) or a stronger damping."
+                f"the heights determine more than {rank} numbers, and the prior has {prior.n_modes} modes on this grid."
+                f" Choose longer ranges or a coarser grid (up to {DENSE_LIMIT} modes are solved whole), or more damping."
             )
         rank *= 2
 
@@ -217,9 +220,9 @@ def _choose(spectrum: Spectrum, options: InversionOptions) -> tuple[Damping, LCu
 
 
 def _nonnegative(rows: sparse.csr_array, y, prior, damping, grid) -> np.ndarray:
-    if grid.n_unknowns > DENSE_LIMIT:
+    if grid.n_unknowns > MOST_NON_NEGATIVE:
         raise NumericalError(
-            f"rates that must not be negative are solved for up to {DENSE_LIMIT} unknowns, and this grid has"
+            f"rates that must not be negative are solved for up to {MOST_NON_NEGATIVE} unknowns, and this grid has"
             f" {grid.n_unknowns}. Choose a coarser uplift grid, or allow subsidence."
         )
     return nonnegative_rates(rows, y, prior, damping.weight)

@@ -4,10 +4,10 @@ import numpy as np
 from scipy import linalg, sparse, stats
 
 from fluvinv.errors import NumericalError
-from fluvinv.inversion import _kernels
 from fluvinv.inversion.prior import FieldPrior
 
 _TRIES = 200
+_NUGGET = 1e-8
 
 
 def nonnegative_least_squares(H: np.ndarray, b: np.ndarray) -> np.ndarray:
@@ -55,6 +55,11 @@ def nonnegative_least_squares(H: np.ndarray, b: np.ndarray) -> np.ndarray:
     raise NumericalError(f"the non-negative inversion did not settle within {_TRIES} exchanges")
 
 
+def _inverse(correlation: np.ndarray) -> np.ndarray:
+    """Inverse of a correlation matrix, with a nugget that keeps close nodes distinguishable."""
+    return linalg.inv(correlation + _NUGGET * np.eye(correlation.shape[0]))
+
+
 def nonnegative_rates(G: sparse.csr_array, y: np.ndarray, prior: FieldPrior, weight: float) -> np.ndarray:
     """Damped estimate of the rates under u >= 0, with a free background rate.
 
@@ -70,13 +75,8 @@ def nonnegative_rates(G: sparse.csr_array, y: np.ndarray, prior: FieldPrior, wei
     -------
     (n_unknowns,) float array, m/yr
     """
-    n_unknowns = G.shape[1]
-    H = np.zeros((n_unknowns, n_unknowns))
-    _kernels.normal_matrix(G.indptr, G.indices, G.data, H)
-    identity_space = np.eye(prior.space.shape[0])
-    identity_time = np.eye(prior.time.shape[0])
-    inverse_space = linalg.cho_solve((prior.space, True), identity_space)
-    inverse_time = linalg.cho_solve((prior.time, True), identity_time)
+    H = (G.T @ G).toarray()
+    inverse_space, inverse_time = _inverse(prior.space), _inverse(prior.time)
     pulled = np.outer(inverse_time.sum(axis=1), inverse_space.sum(axis=1)).ravel()
     damp = np.kron(inverse_time, inverse_space)
     damp -= np.outer(pulled, pulled) / pulled.sum()

@@ -2,6 +2,8 @@
 
 import numpy as np
 
+from scipy import sparse
+
 from fluvinv.inversion.choose import Damping
 from fluvinv.inversion.solve import Spectrum
 from fluvinv.inversion.uplift_grid import UpliftGrid
@@ -13,7 +15,7 @@ RESOLVED_SHARE = 0.4
 def standard_deviation(spectrum: Spectrum, damping: Damping, grid: UpliftGrid, mix: np.ndarray) -> np.ndarray:
     r"""Posterior standard deviation of linear mixtures over age of the rate at each place.
 
-    The posterior covariance of the field is spread^2 (R - Z F Z') with R = S S', Z = S V and F the filter
+    The posterior covariance of the field is spread^2 (R - Z F Z') with R the prior's correlation, Z = S V and F the filter
     factors (Tarantola 2005, eq. 3.38, in spectral form). The free background adds its own part:
     u = (1 - 1 g') f + error of the background, of variance height_sd^2 / tau'tau.
 
@@ -42,8 +44,7 @@ def standard_deviation(spectrum: Spectrum, damping: Damping, grid: UpliftGrid, m
     for row, weights in enumerate(mix):
         learnt[row] = np.sum(np.tensordot(weights, cube, axes=(0, 0)) ** 2, axis=1)
     correlated = spectrum.prior.correlate(g)
-    time_root = mix @ spectrum.prior.time
-    own = np.sum(time_root**2, axis=1)[:, None] * np.sum(spectrum.prior.space**2, axis=1)[None, :]
+    own = np.einsum("ij,jk,ik->i", mix, spectrum.prior.time, mix)[:, None]
     total = mix.sum(axis=1)[:, None]
     cross = mix @ correlated.reshape(n_ages, n_places)
     background = damping.weight**2 / spectrum.tau_squared + g @ correlated
@@ -61,12 +62,19 @@ def cumulative_mix(ages: np.ndarray) -> np.ndarray:
     return mix
 
 
-def kernel_share(spectrum: Spectrum, damping: Damping, grid: UpliftGrid) -> np.ndarray:
+def kernel_share(rows: sparse.csr_array, spectrum: Spectrum, damping: Damping, grid: UpliftGrid) -> np.ndarray:
     """Share of the squared averaging kernel that lies within one map node and one age node.
 
     The averaging kernel of a node is its row of A = d u_hat / d u_true, background included: every estimate
     is an average of the true rates with these weights. The share is a statement about the averaging, not
-    about the prior.
+    about the prior. With Z = S V, A = 1 g' + (1 - 1 g') Z (D + lambda^2)^-1 Z' G' Q G; directions whose
+    filter factor is below 1e-4 add nothing that counts.
+
+    Parameters
+    ----------
+    rows : (n_rows, n_unknowns) csr array, yr
+        The rows that were decomposed.
+    spectrum, damping, grid
 
     Returns
     -------
@@ -74,12 +82,14 @@ def kernel_share(spectrum: Spectrum, damping: Damping, grid: UpliftGrid) -> np.n
         Between 0 and 1; 0 where the estimate depends on nothing.
     """
     g = spectrum.background_row
-    basis = spectrum.prior.root(spectrum.vectors)
+    used = spectrum.filter(damping.weight) > 1e-4
+    basis = spectrum.prior.root(spectrum.vectors[:, used])
+    carried = g @ basis
     left = np.empty((basis.shape[0], basis.shape[1] + 1))
-    left[:, :-1] = (basis - g @ basis) * spectrum.filter(damping.weight)
+    left[:, :-1] = (basis - carried) / (spectrum.values[used] + damping.weight**2)
     left[:, -1] = 1.0
     right = np.empty_like(left)
-    right[:, :-1] = spectrum.prior.whiten_transposed(spectrum.vectors)
+    right[:, :-1] = rows.T @ (rows @ basis) - spectrum.tau_squared * np.outer(g, carried)
     right[:, -1] = g
     whole = np.sum((left @ (right.T @ right)) * left, axis=1)
     near = _near_squares(left, right, grid)

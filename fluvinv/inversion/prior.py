@@ -3,110 +3,131 @@
 from dataclasses import dataclass
 
 import numpy as np
-from scipy import linalg, special
+from scipy import linalg, sparse, special
 
-from fluvinv.errors import NumericalError
 from fluvinv.inversion.uplift_grid import UpliftGrid
 
-#: Added to the diagonal of a correlation matrix, so that closely spaced nodes stay distinguishable.
-_NUGGET = 1e-8
+#: Modes whose prior variance is below this share of the largest are left out.
+SMALLEST_MODE = 1e-6
+
+#: Smoothness of the field in space and in time. Rougher fields (1 and 1/2) let the rate between two nodes differ so
+#: much from the line between them that the answer depends on the grid: halving spacing and step widened the
+#: standard deviations by 40 %, against 8 % with these.
+SMOOTHNESS_SPACE, SMOOTHNESS_TIME = 2.0, 1.5
 
 
-def matern_correlation(distance, range_):
-    r"""Correlation of a plane Matern field of smoothness nu = 1 (Whittle 1954).
+def matern_correlation(distance, range_, smoothness):
+    r"""Correlation of a Matern field.
 
-    .. math:: \rho(d) = \kappa d \, K_1(\kappa d), \quad \kappa = \sqrt{8} / r
+    .. math:: \rho(d) = \frac{2^{1-\nu}}{\Gamma(\nu)} (\kappa d)^\nu K_\nu(\kappa d), \quad \kappa = \sqrt{8\nu} / r
 
-    It is the field whose stochastic partial differential equation Lindgren, Rue & Lindstrom (2011) solve;
-    here its correlation is used as it stands, so there is no edge effect and no dependence on the grid.
-    At the range r the correlation has fallen to about 0.14.
+    with the range r as Lindgren, Rue & Lindstrom (2011) define it: there the correlation has fallen to about
+    0.14. The correlation is used as it stands, so there is no edge effect and no dependence on the grid.
 
     Parameters
     ----------
-    distance : array, m
-    range_ : float, m
+    distance : array, m or yr
+    range_ : float, the same unit
+    smoothness : float
+        nu; 1/2 is the exponential.
 
     Returns
     -------
     array of the same shape
     """
-    scaled = np.sqrt(8.0) * np.asarray(distance, dtype=float) / range_
+    scaled = np.sqrt(8.0 * smoothness) * np.abs(np.asarray(distance, dtype=float)) / range_
     result = np.ones_like(scaled)
-    apart = scaled > 0
-    result[apart] = scaled[apart] * special.k1(scaled[apart])
+    apart = scaled > 1e-9
+    factor = 2 ** (1 - smoothness) / special.gamma(smoothness)
+    result[apart] = factor * scaled[apart] ** smoothness * special.kv(smoothness, scaled[apart])
     return result
-
-
-def exponential_correlation(lag, range_):
-    """Correlation exp(-2 |lag| / range): a Matern process of smoothness 1/2, 0.135 at the range.
-
-    Sample paths are continuous and rough, so that a step in time is not forbidden.
-    """
-    return np.exp(-2.0 * np.abs(np.asarray(lag, dtype=float)) / range_)
 
 
 @dataclass(frozen=True, slots=True)
 class FieldPrior:
-    """Correlation of the unknown rates as Kronecker factors: space times time.
+    """The prior on the nodes of a grid, as a product of space and time, with its leading modes.
 
     The prior is u = u0 + f with a free background rate u0 and a Gaussian field f of covariance
-    spread^2 times the product of a Matern correlation in space and an exponential one in time. It is a prior
-    on functions: halving the spacing or the step of the grid leaves it as it is.
+    spread^2 times the product of a Matern correlation in space and one in time. It is a prior on functions:
+    halving the spacing or the step of the grid leaves it as it is. Its modes are products of the
+    eigenvectors of both correlations; modes with next to no prior variance are left out, so that a finer
+    grid does not mean more numbers to solve for.
 
     Attributes
     ----------
     space : (n_places, n_places) float array
-        Lower Cholesky factor of the correlation between places.
+        Correlation between places.
     time : (n_ages, n_ages) float array
-        Lower Cholesky factor of the correlation between ages.
+        Correlation between ages.
+    space_modes, time_modes : (n_places, n_places) and (n_ages, n_ages) float arrays
+        Eigenvectors times the square roots of their eigenvalues.
+    kept : (n_modes,) int array
+        Kept products, as indices into the flattened (n_ages, n_places) table of products.
     """
 
     space: np.ndarray
     time: np.ndarray
+    space_modes: np.ndarray
+    time_modes: np.ndarray
+    kept: np.ndarray
 
-    def _apply(self, space, time, values):
-        """Kronecker product (time x space) times columns of shape (n_unknowns, ...)."""
-        shape = values.shape
-        cube = values.reshape(time.shape[1], space.shape[1], -1)
-        cube = np.matmul(space, cube)
-        return np.tensordot(time, cube, axes=(1, 0)).reshape(shape)
+    @property
+    def n_modes(self) -> int:
+        """Number of modes that are kept."""
+        return self.kept.size
 
-    def root(self, white):
-        """Turn independent standard normals into the unit field: S w, with S S' the correlation."""
-        return self._apply(self.space, self.time, white)
+    def root(self, white: np.ndarray) -> np.ndarray:
+        """Turn independent standard normals, one per mode, into the unit field at the unknowns.
 
-    def root_transposed(self, values):
-        """S' v."""
-        return self._apply(self.space.T, self.time.T, values)
+        Parameters
+        ----------
+        white : (n_modes, ...) float array
 
-    def whiten_transposed(self, values):
-        """S'^-1 v: the inverse of `root_transposed`."""
-        shape = values.shape
-        cube = values.reshape(self.time.shape[0], self.space.shape[0], -1)
-        flat = np.moveaxis(cube, 1, 0).reshape(self.space.shape[0], -1)
-        flat = linalg.solve_triangular(self.space, flat, lower=True, trans="T", check_finite=False)
-        cube = np.moveaxis(flat.reshape(cube.shape[1], cube.shape[0], -1), 0, 1).reshape(cube.shape[0], -1)
-        cube = linalg.solve_triangular(self.time, cube, lower=True, trans="T", check_finite=False)
-        return cube.reshape(shape)
+        Returns
+        -------
+        (n_unknowns, ...) float array
+        """
+        n_ages, n_places = self.time.shape[0], self.space.shape[0]
+        table = np.zeros((n_ages * n_places, *white.shape[1:]))
+        table[self.kept] = white
+        field = np.matmul(self.space_modes, table.reshape(n_ages, n_places, -1))
+        return np.tensordot(self.time_modes, field, axes=(1, 0)).reshape(table.shape)
 
-    def correlate(self, values):
-        """S S' v: the correlation matrix times columns."""
-        return self.root(self.root_transposed(values))
+    def root_transposed(self, values: np.ndarray) -> np.ndarray:
+        """Transpose of `root`: from (n_unknowns,) values to (n_modes,)."""
+        table = self.time_modes.T @ values.reshape(self.time.shape[0], -1) @ self.space_modes
+        return table.ravel()[self.kept]
+
+    def rows_by_mode(self, rows: sparse.csr_array) -> np.ndarray:
+        """Rows of the sensitivity matrix times every mode.
+
+        Parameters
+        ----------
+        rows : (n_rows, n_unknowns) csr array
+
+        Returns
+        -------
+        (n_rows, n_modes) float array
+        """
+        n_ages, n_places = self.time.shape[0], self.space.shape[0]
+        by_place = rows.reshape((rows.shape[0] * n_ages, n_places)).tocsr() @ self.space_modes
+        by_age = np.matmul(self.time_modes.T, by_place.reshape(rows.shape[0], n_ages, n_places))
+        return by_age.reshape(rows.shape[0], -1)[:, self.kept]
+
+    def correlate(self, values: np.ndarray) -> np.ndarray:
+        """The correlation matrix times (n_unknowns,) values."""
+        return (self.time @ values.reshape(self.time.shape[0], -1) @ self.space).ravel()
 
 
-def _cholesky(correlation: np.ndarray, what: str) -> np.ndarray:
-    correlation[np.diag_indices_from(correlation)] += _NUGGET
-    try:
-        return linalg.cholesky(correlation, lower=True, overwrite_a=True, check_finite=False)
-    except linalg.LinAlgError as error:
-        raise NumericalError(
-            f"the prior's correlation in {what} is not positive definite: the range is very long for so fine"
-            f" a grid. Choose a shorter range or a coarser uplift grid."
-        ) from error
+def _modes(correlation: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Eigenvalues, descending, and eigenvectors scaled by the roots of their eigenvalues."""
+    values, vectors = linalg.eigh(correlation)
+    values = np.maximum(values[::-1], 0.0)
+    return values, vectors[:, ::-1] * np.sqrt(values)
 
 
 def make_prior(grid: UpliftGrid, range_space: float, range_time: float) -> FieldPrior:
-    """Factor the prior's correlation on the places and ages of a grid.
+    """Correlations and modes of the prior on the places and ages of a grid.
 
     Parameters
     ----------
@@ -118,14 +139,13 @@ def make_prior(grid: UpliftGrid, range_space: float, range_time: float) -> Field
     Returns
     -------
     FieldPrior
-
-    Raises
-    ------
-    NumericalError
-        If the correlation cannot be factored.
     """
     xy = grid.place_xy
     distance = np.hypot(xy[:, None, 0] - xy[None, :, 0], xy[:, None, 1] - xy[None, :, 1])
-    space = _cholesky(matern_correlation(distance, range_space), "space")
-    time = _cholesky(exponential_correlation(grid.ages[:, None] - grid.ages[None, :], range_time), "time")
-    return FieldPrior(space, time)
+    space = matern_correlation(distance, range_space, SMOOTHNESS_SPACE)
+    time = matern_correlation(grid.ages[:, None] - grid.ages[None, :], range_time, SMOOTHNESS_TIME)
+    space_values, space_modes = _modes(space)
+    time_values, time_modes = _modes(time)
+    variance = np.outer(time_values, space_values).ravel()
+    kept = np.flatnonzero(variance > SMALLEST_MODE * variance.max())
+    return FieldPrior(space, time, space_modes, time_modes, kept)

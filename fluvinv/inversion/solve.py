@@ -1,8 +1,8 @@
 r"""The damped linear inversion in spectral form.
 
-The estimate minimises |y - G u|^2 + lambda^2 |w|^2 with u = u0 + S w: S S' is the prior's correlation, the
-background rate u0 is free and lambda is the ratio of the height error to the prior's spread. Since the rows
-of G sum to tau, the background's column is tau itself; projecting it out with Q leaves
+The estimate minimises |y - G u|^2 + lambda^2 |w|^2 with u = u0 + S w: the columns of S are the modes of the
+prior, the background rate u0 is free and lambda is the ratio of the height error to the prior's spread. Since
+the rows of G sum to tau, the background's column is tau itself; projecting it out with Q leaves
 M = S' G' Q G S = V D V'. From then on every damping costs next to nothing: filter factors are
 f = d / (d + lambda^2) (Hansen 1998), and so are the misfit, the effective parameters and the posterior.
 """
@@ -14,11 +14,12 @@ from scipy import linalg, sparse
 from scipy.sparse.linalg import ArpackError, LinearOperator, eigsh
 
 from fluvinv.errors import NumericalError
-from fluvinv.inversion import _kernels
 from fluvinv.inversion.prior import FieldPrior
 
-#: Above this many unknowns only the best determined directions are computed, by Lanczos iteration.
-DENSE_LIMIT = 8000
+#: Above this many modes of the prior only the best determined directions are computed, by Lanczos iteration.
+DENSE_LIMIT = 6000
+
+_ROWS_AT_ONCE = 1000
 
 
 @dataclass(frozen=True, slots=True)
@@ -30,8 +31,8 @@ class Spectrum:
     prior : FieldPrior
     values : (k,) float array
         D, descending; squared singular values of Q G S (yr2).
-    vectors : (n_unknowns, k) float array
-        V in whitened coordinates.
+    vectors : (n_modes, k) float array
+        V.
     loads : (k,) float array
         V' S' G' Q y.
     background_row : (n_unknowns,) float array
@@ -157,29 +158,36 @@ def decompose(
     )
 
 
+def _chunks(rows: sparse.csr_array):
+    """Slices of the rows, small enough for their dense products with the modes."""
+    for first in range(0, rows.shape[0], _ROWS_AT_ONCE):
+        yield slice(first, min(first + _ROWS_AT_ONCE, rows.shape[0]))
+
+
 def _all_directions(G, background_row, tau_squared, prior):
-    n_unknowns = G.shape[1]
-    matrix = np.zeros((n_unknowns, n_unknowns))
-    _kernels.normal_matrix(G.indptr, G.indices, G.data, matrix)
-    matrix -= tau_squared * np.outer(background_row, background_row)
-    matrix = prior.root_transposed(matrix)
-    matrix = prior.root_transposed(np.ascontiguousarray(matrix.T))
+    matrix = np.zeros((prior.n_modes, prior.n_modes))
+    for part in _chunks(G):
+        by_mode = prior.rows_by_mode(G[part])
+        matrix += by_mode.T @ by_mode
+    pull = prior.root_transposed(background_row)
+    matrix -= tau_squared * np.outer(pull, pull)
     try:
         return linalg.eigh(matrix, overwrite_a=True, check_finite=True, driver="evd")
     except (linalg.LinAlgError, ValueError) as error:
-        raise NumericalError(f"the dense eigensolver failed on {n_unknowns} unknowns: {error}") from error
+        raise NumericalError(f"the dense eigensolver failed on {prior.n_modes} modes: {error}") from error
 
 
 def _leading_directions(G, background_row, tau_squared, prior, rank, seed):
+    n_modes = prior.n_modes
+
     def product(white):
-        rates = prior.root(white)
+        rates = prior.root(white.ravel())
         curvature = G.T @ (G @ rates) - tau_squared * background_row * (background_row @ rates)
         return prior.root_transposed(curvature)
 
-    n_unknowns = G.shape[1]
-    operator = LinearOperator((n_unknowns, n_unknowns), matvec=product, dtype=float)
-    start = np.random.default_rng(seed).standard_normal(n_unknowns)
+    operator = LinearOperator((n_modes, n_modes), matvec=product, dtype=float)
+    start = np.random.default_rng(seed).standard_normal(n_modes)
     try:
-        return eigsh(operator, k=min(rank, n_unknowns - 1), which="LA", v0=start, tol=1e-8)
+        return eigsh(operator, k=min(rank, n_modes - 1), which="LA", v0=start, tol=1e-8)
     except ArpackError as error:
-        raise NumericalError(f"the iterative eigensolver did not converge on {n_unknowns} unknowns: {error}") from error
+        raise NumericalError(f"the iterative eigensolver did not converge on {n_modes} modes: {error}") from error

@@ -153,7 +153,7 @@ def make_grid(network: RiverNetwork, spacing: float, ages: np.ndarray) -> Uplift
     return UpliftGrid(bare.west, bare.north, bare.spacing, n_rows, n_cols, bare.ages, place)
 
 
-def suggest_spacing(area: float, n_places: int = 220) -> float:
+def suggest_spacing(area: float, n_places: int = 300) -> float:
     """Map spacing (m) that lays about `n_places` map nodes over an area (m2)."""
     return nice_number(np.sqrt(area / n_places))
 
@@ -166,8 +166,8 @@ def suggest_step(longest: float, n_steps: int = 12) -> float:
 def suggest_ranges(network: RiverNetwork, tau: np.ndarray) -> tuple[float, float]:
     """Ranges of the prior in space (m) and time (yr) where the user states none.
 
-    Half the width of the drained area (its square root), and half the longest travel time: histories that
-    are smooth over a good part of what the rivers can see. This is a choice, not a finding.
+    0.7 times the width of the drained area (its square root) and 0.7 times the longest travel time: histories
+    that are smooth over a good part of what the rivers can see. This is a choice, not a finding.
     """
     area = float(network.area[network.outlet].sum())
-    return 0.5 * np.sqrt(area), 0.5 * float(tau.max())
+    return 0.7 * np.sqrt(area), 0.7 * float(tau.max())
