@@ -3,9 +3,9 @@
 import os
 from pathlib import Path
 
-from fluvinv.errors import OutputError
-from fluvinv.files import rasters
+from fluvinv.files import publish, rasters
 from fluvinv.files.first_settings import first_settings_text
+from fluvinv.files.settings_keys import naming_keys
 from fluvinv.guesses import first_guesses
 from fluvinv.inversion import predict_cost
 from fluvinv.layout import lay_out
@@ -24,23 +24,14 @@ def start(dem: Path, output: Path | None, overwrite: bool) -> Outcome:
     OutputError
         If the file exists and is not to be replaced, or cannot be written.
     """
-    grid = rasters.read_dem(dem)
-    guesses = first_guesses(grid)
+    with naming_keys({"catchment.dem": str(dem)}):
+        grid = rasters.read_dem(dem)
+        guesses = first_guesses(grid)
     folder = Path() if output is None else output
     target = folder / f"{dem.stem}.yml"
-    if target.exists() and not overwrite:
-        raise OutputError(f"{target}: exists already. Give --overwrite to replace it, or --output another folder.")
     written = os.path.relpath(dem.absolute(), folder.absolute())
     text = first_settings_text(written, dem.stem, guesses)
-    partial = target.with_name(f".{target.name}.{os.getpid()}.partial")
-    try:
-        folder.mkdir(parents=True, exist_ok=True)
-        partial.write_text(text, encoding="utf-8")
-        partial.replace(target)
-    except OSError as error:
-        raise OutputError(f"{target}: cannot be written: {error.strerror}.") from error
-    finally:
-        partial.unlink(missing_ok=True)
+    publish.write_text(target, text, overwrite, [dem])
     n_rows, n_cols = grid.height.shape
     lines = summary.entry("DEM", [f"{n_rows:,} x {n_cols:,} cells, {grid.crs.name}, {int(grid.void.sum()):,} void."])
     for key, (value, reason) in guesses.items():
@@ -51,39 +42,39 @@ def start(dem: Path, output: Path | None, overwrite: bool) -> Outcome:
 
 def check(settings_path: Path, output: Path | None, overwrite: bool, progress: Progress) -> Outcome:
     """Tell what a run would do, and what it would cost; write nothing."""
-    job = open_job(settings_path, progress)
-    folder = target_folder(job.settings, output)
-    if not refuse_target(job, settings_path, folder, overwrite, ("run",)):
-        done = f"{folder} already holds the result of the same inputs and settings; a run would change nothing."
-        return Outcome(folder, [done], [])
-    rivers = draw_rivers(job)
-    layout = lay_out(job.settings, rivers.network, rivers.tau, job.grid)
-    job.step("", 1.0)
-    grid, options = layout.grid, layout.options
-    cost = predict_cost(rivers.tau, rivers.network.distance, grid)
-    n_rows, n_cols = job.grid.height.shape
-    memory = (cost.memory + 60.0 * n_rows * n_cols) / 2**30 + 0.3
-    seconds = cost.seconds + job.timings.get("drainage", 0.0) + 8.0
-    lines = [
-        *rivers_lines(job, rivers),
-        *summary.entry(
-            "Unknowns",
-            [
-                f"{grid.n_unknowns:,}: {grid.n_places:,} map nodes {m_to_km(grid.spacing):g} km apart times"
-                f" {grid.n_ages} ages {yr_to_myr(grid.ages[1]):g} Myr apart, to {yr_to_myr(grid.ages[-1]):.3g} Ma;"
-                f" {cost.method} solver."
-            ],
-        ),
-        *summary.entry(
-            "Prior",
-            [
-                f"ranges {m_to_km(options.range_space):.3g} km and {yr_to_myr(options.range_time):.3g} Myr;"
-                f" damping by {options.choose}."
-            ],
-        ),
-        *summary.entry(
-            "Cost", [f"about {memory:.1f} GiB of memory and {seconds:,.0f} s (within a factor of two or three)."]
-        ),
-        *summary.entry("Would write", [str(folder)]),
-    ]
-    return Outcome(folder, lines, job.warnings + layout.warnings)
+    with open_job(settings_path, progress) as job:
+        folder = target_folder(job.settings, output)
+        if not refuse_target(job, settings_path, folder, overwrite, ("run",)):
+            done = f"{folder} already holds the result of the same inputs and settings; a run would change nothing."
+            return Outcome(folder, [done], [])
+        rivers = draw_rivers(job)
+        layout = lay_out(job.settings, rivers.network, rivers.tau, job.grid)
+        job.step("", 1.0)
+        grid, options = layout.grid, layout.options
+        cost = predict_cost(rivers.tau, rivers.network.distance, grid)
+        n_rows, n_cols = job.grid.height.shape
+        memory = (cost.memory + 60.0 * n_rows * n_cols) / 2**30 + 0.3
+        seconds = cost.seconds + job.timings.get("drainage", 0.0) + 8.0
+        lines = [
+            *rivers_lines(job, rivers),
+            *summary.entry(
+                "Unknowns",
+                [
+                    f"{grid.n_unknowns:,}: {grid.n_places:,} map nodes {m_to_km(grid.spacing):g} km apart times"
+                    f" {grid.n_ages} ages {yr_to_myr(grid.ages[1]):g} Myr apart, to {yr_to_myr(grid.ages[-1]):.3g} Ma;"
+                    f" {cost.method} solver."
+                ],
+            ),
+            *summary.entry(
+                "Prior",
+                [
+                    f"ranges {m_to_km(options.range_space):.3g} km and {yr_to_myr(options.range_time):.3g} Myr;"
+                    f" damping by {options.choose}."
+                ],
+            ),
+            *summary.entry(
+                "Cost", [f"about {memory:.1f} GiB of memory and {seconds:,.0f} s (within a factor of two or three)."]
+            ),
+            *summary.entry("Would write", [str(folder)]),
+        ]
+        return Outcome(folder, lines, job.warnings + layout.warnings)

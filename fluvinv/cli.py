@@ -1,19 +1,23 @@
 """The command line: verbs that parse, call the pipeline and map errors to exit codes."""
 
+import os
 import signal
 import sys
 import traceback
+import warnings
 from pathlib import Path
 from typing import Annotated
 
-import click
 import typer
 
-from fluvinv.errors import FluvinvError
+from fluvinv.errors import FluvinvError, OutputError
+
+#: What the parser raises on a wrong command line; typer exports only this class's child.
+UsageError = typer.BadParameter.__base__
+INTERRUPTED = 130
 
 app = typer.Typer(
     add_completion=False,
-    no_args_is_help=True,
     pretty_exceptions_enable=False,
     help="Histories of rock uplift, with their uncertainty, from the river profiles of a digital elevation model.",
 )
@@ -38,7 +42,12 @@ def _finish(outcome, quiet: bool) -> None:
         return
     for warning in outcome.warnings:
         print(f"Warning: {warning}", file=sys.stderr)
-    print("\n".join(outcome.lines))
+    try:
+        print("\n".join(outcome.lines), flush=True)
+    except OSError as error:
+        # Python flushes once more when it ends, and that must not fail again.
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        raise OutputError(f"the summary cannot be written to stdout ({error.strerror}); the rest is done.") from error
 
 
 @app.command()
@@ -125,19 +134,33 @@ def main(arguments: list[str] | None = None) -> int:
     """
     arguments = sys.argv[1:] if arguments is None else arguments
     verbose = "-v" in arguments or "--verbose" in arguments
-    signal.signal(signal.SIGTERM, _interrupt)
+    before = {number: signal.signal(number, _interrupt) for number in (signal.SIGINT, signal.SIGTERM)}
+    try:
+        with warnings.catch_warnings():
+            if not sys.warnoptions:  # remarks of libraries are for who develops: python -W shows them
+                warnings.simplefilter("ignore")
+            return _run(arguments, verbose)
+    finally:
+        for number, handler in before.items():
+            signal.signal(number, handler)
+
+
+def _run(arguments: list[str], verbose: bool) -> int:
+    """Run one verb and turn what it raises into a message and an exit code."""
     try:
         code = app(args=arguments, prog_name="fluvinv", standalone_mode=False)
+        if code == INTERRUPTED:  # how typer returns a KeyboardInterrupt
+            raise KeyboardInterrupt
         return code if isinstance(code, int) else 0
     except FluvinvError as error:
         _complain(str(error), verbose)
         return error.exit_code
-    except click.ClickException as error:
-        error.show()
+    except UsageError as error:
+        _complain(f"{error.format_message()} `fluvinv --help` and `fluvinv VERB --help` tell what there is.", verbose)
         return 2
-    except (KeyboardInterrupt, click.Abort):
+    except (KeyboardInterrupt, typer.Abort):
         print("fluvinv: interrupted; nothing was left half-written.", file=sys.stderr)
-        return 130
+        return INTERRUPTED
     except MemoryError:
         _complain(
             "out of memory. `fluvinv check` tells what a run needs; choose a coarser uplift grid or channels.", verbose

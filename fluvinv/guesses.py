@@ -2,7 +2,6 @@
 
 import numpy as np
 
-from fluvinv.errors import InputError
 from fluvinv.inversion import nice_number, suggest_spacing, suggest_step
 from fluvinv.streampower.analytic import HackRiver
 from fluvinv.terrain import Grid, find_sea
@@ -32,15 +31,10 @@ def first_guesses(grid: Grid, base_level: float = 0.0) -> dict[str, tuple[object
     Raises
     ------
     InputError
-        If the DEM holds no height or no land above base level.
+        If the DEM holds no height or none above base level, see `find_sea`.
     """
     sea = find_sea(grid, base_level, "auto")
     land = ~grid.void & ~sea.sea & (grid.height > base_level)
-    if not land.any():
-        raise InputError(
-            f"the DEM holds no land above {base_level:g} m: {int(grid.void.sum()):,} cells of {grid.void.size:,} are void,"
-            " the others lie at or below base level."
-        )
     area_by_row = grid.cell_area_by_row()
     area = float((land.sum(axis=1) * area_by_row).sum())
     heights = grid.height[land]
@@ -55,14 +49,15 @@ def first_guesses(grid: Grid, base_level: float = 0.0) -> dict[str, tuple[object
     guesses = {
         "stream_power.erodibility": (
             erodibility,
-            f"a river {m_to_km(reach):.3g} km long under Hack's law, in balance with {m_per_yr_to_mm_per_yr(TYPICAL_RATE):.3g}"
-            f" mm/yr, would stand at the DEM's relief of {relief:,.0f} m; sets the clock, so calibrate it",
+            f"a river {m_to_km(reach):.3g} km long under Hack's law, in balance with"
+            f" {m_per_yr_to_mm_per_yr(TYPICAL_RATE):.3g} mm/yr, would stand at the DEM's relief of {relief:,.0f} m;"
+            " sets the clock, so calibrate it",
         ),
         "stream_power.area_exponent": (AREA_EXPONENT, "the middle of the usual 0.4 to 0.6"),
-        "uplift_grid.spacing_km": (m_to_km(spacing), f"about 220 map nodes on {m2_to_km2(area):,.0f} km2 of land"),
+        "uplift_grid.spacing_km": (m_to_km(spacing), f"about 120 map nodes on {m2_to_km2(area):,.0f} km2 of land"),
         "uplift_grid.step_myr": (
             yr_to_myr(suggest_step(longest)),
-            f"a twelfth of the {yr_to_myr(longest):.3g} Myr that this erodibility gives the longest river",
+            f"an eighth of the {yr_to_myr(longest):.3g} Myr that this erodibility gives the longest river",
         ),
     }
     if not sea.sea.any():

@@ -1,7 +1,8 @@
 """The jobs behind the verbs: the one place where settings, files and science meet."""
 
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass, field
 from pathlib import Path
 
@@ -12,7 +13,7 @@ from fluvinv import __version__
 from fluvinv.files import publish, rasters, record, tables, vectors
 from fluvinv.files.cautions import CAUTIONS
 from fluvinv.files.settings import Settings, settings_record
-from fluvinv.files.settings_file import read_settings
+from fluvinv.files.settings_file import open_settings
 from fluvinv.inversion import Comparison, Inversion, compare, history_at_nodes, invert
 from fluvinv.layout import Layout, lay_out
 from fluvinv.network import RiverNetwork
@@ -77,9 +78,14 @@ def target_folder(settings: Settings, output: Path | None) -> Path:
     return Path(output) if output is not None else settings.results_directory
 
 
-def open_job(settings_path: Path, progress: Progress = _quiet) -> Job:
-    """Read settings and inputs."""
-    settings = read_settings(settings_path)
+@contextmanager
+def open_job(settings_path: Path, progress: Progress = _quiet) -> Iterator[Job]:
+    """Read settings and inputs; errors about a key tell its line as long as the job is open."""
+    with open_settings(settings_path) as settings:
+        yield _read_inputs(settings, progress)
+
+
+def _read_inputs(settings: Settings, progress: Progress) -> Job:
     job = Job(settings, None, [], "", progress)
     job.step("reading", 0.0)
     job.grid = rasters.read_dem(settings.catchment.dem)
@@ -99,7 +105,7 @@ def _input_paths(settings_path: Path, settings: Settings) -> list[Path]:
 
 def refuse_target(job: Job, settings_path: Path, folder: Path, overwrite: bool, stages: tuple[str, ...]) -> bool:
     """Refuse a results folder that must not be written; False where the wanted result stands there already."""
-    if publish.already_done(folder, job.fingerprint, stages):
+    if not overwrite and publish.already_done(folder, job.fingerprint, stages):
         return False
     publish.check_target(folder, _input_paths(settings_path, job.settings), job.fingerprint, overwrite)
     return True
@@ -133,43 +139,45 @@ def network(
     settings_path: Path, output: Path | None = None, overwrite: bool = False, progress: Progress = _quiet
 ) -> Outcome:
     """Run the terrain stage alone and publish what it found."""
-    job = open_job(settings_path, progress)
-    folder = target_folder(job.settings, output)
-    if not refuse_target(job, settings_path, folder, overwrite, ("network", "run")):
-        return Outcome(folder, [f"{folder} already holds the network of the same inputs and settings."], [])
-    with publish.results_folder(folder) as staging:
-        rivers = draw_rivers(job)
-        job.step("writing", 0.8)
-        _write_rivers(staging, rivers, job.grid.crs)
-        tables.write_profiles(staging / "profiles.csv", tables.profiles_table(rivers.network, rivers.chi, rivers.tau))
-        _draw(staging, {"network_map": river_figures.network_map(rivers.network),
-                        "profiles": river_figures.long_profiles(rivers.network)} | _chi_figure(rivers))  # fmt: skip
-        job.step("", 1.0)
-        written = _record(job, "network", rivers)
-        record.write_record(staging / publish.RECORD_NAME, written)
-    return Outcome(folder, [*rivers_lines(job, rivers), *summary.entry("Results", [str(folder)])], job.warnings)
+    with open_job(settings_path, progress) as job:
+        folder = target_folder(job.settings, output)
+        if not refuse_target(job, settings_path, folder, overwrite, ("network", "run")):
+            return Outcome(folder, [f"{folder} already holds the network of the same inputs and settings."], [])
+        with publish.results_folder(folder) as staging:
+            rivers = draw_rivers(job)
+            job.step("writing", 0.8)
+            _write_rivers(staging, rivers, job.grid.crs)
+            tables.write_profiles(
+                staging / "profiles.csv", tables.profiles_table(rivers.network, rivers.chi, rivers.tau)
+            )
+            _draw(staging, {"network_map": river_figures.network_map(rivers.network),
+                            "profiles": river_figures.long_profiles(rivers.network)} | _chi_figure(rivers))  # fmt: skip
+            job.step("", 1.0)
+            written = _record(job, "network", rivers)
+            record.write_record(staging / publish.RECORD_NAME, written)
+        return Outcome(folder, [*rivers_lines(job, rivers), *summary.entry("Results", [str(folder)])], job.warnings)
 
 
 def run(
     settings_path: Path, output: Path | None = None, overwrite: bool = False, progress: Progress = _quiet
 ) -> Outcome:
     """Run the whole job and publish its results."""
-    job = open_job(settings_path, progress)
-    folder = target_folder(job.settings, output)
-    if not refuse_target(job, settings_path, folder, overwrite, ("run",)):
-        return Outcome(folder, [f"{folder} already holds the result of the same inputs and settings."], [])
-    with publish.results_folder(folder) as staging:
-        rivers = draw_rivers(job)
-        layout = lay_out(job.settings, rivers.network, rivers.tau, job.grid)
-        job.warnings += layout.warnings
-        shares = {"rows": 0.1, "decomposition": 0.2, "damping": 0.6, "errors": 0.65}
-        with drawing.styled():
-            result = invert(
-                rivers.network, rivers.tau, layout.grid, layout.options, lambda name: job.step(name, shares[name])
-            )
-            job.step("figures", 0.8)
-            lines = _publish_run(staging, job, rivers, layout, result)
-    return Outcome(folder, [*lines, *summary.entry("Results", [str(folder)])], job.warnings)
+    with open_job(settings_path, progress) as job:
+        folder = target_folder(job.settings, output)
+        if not refuse_target(job, settings_path, folder, overwrite, ("run",)):
+            return Outcome(folder, [f"{folder} already holds the result of the same inputs and settings."], [])
+        with publish.results_folder(folder) as staging:
+            rivers = draw_rivers(job)
+            layout = lay_out(job.settings, rivers.network, rivers.tau, job.grid)
+            job.warnings += layout.warnings
+            shares = {"rows": 0.1, "decomposition": 0.2, "damping": 0.6, "errors": 0.65}
+            with drawing.styled():
+                result = invert(
+                    rivers.network, rivers.tau, layout.grid, layout.options, lambda name: job.step(name, shares[name])
+                )
+                job.step("figures", 0.8)
+                lines = _publish_run(staging, job, rivers, layout, result)
+        return Outcome(folder, [*lines, *summary.entry("Results", [str(folder)])], job.warnings)
 
 
 def _publish_run(staging: Path, job: Job, rivers: Rivers, layout: Layout, result: Inversion) -> list[str]:
@@ -203,6 +211,7 @@ def _publish_run(staging: Path, job: Job, rivers: Rivers, layout: Layout, result
 
 
 def rivers_lines(job: Job, rivers: Rivers) -> list[str]:
+    """Say in the summary what was drawn and what sets the clock."""
     power, terrain = job.settings.stream_power, rivers.terrain
     chosen = job.settings.terrain.channel_area_km2 == "auto"
     return [

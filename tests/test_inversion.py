@@ -34,10 +34,9 @@ class Problem:
         self.y = self.G @ self.truth + HEIGHT * rng.standard_normal(self.network.n_nodes)
         self.spectrum = decompose(self.G, self.y, self.tau, self.prior)
         self.damping = Damping(HEIGHT / SPREAD, HEIGHT, SPREAD)
-        columns = np.column_stack([self.G.toarray(), self.tau])
-        precision = np.zeros((n + 1, n + 1))
-        precision[:n, :n] = np.linalg.inv(self.correlation) / SPREAD**2
-        to_rate = np.column_stack([np.eye(n), np.ones(n)])
+        columns = np.column_stack([self.G @ root, self.tau])
+        precision = np.diag(np.r_[np.full(n, SPREAD**-2), 0.0])
+        to_rate = np.column_stack([root, np.ones(n)])
         posterior = np.linalg.inv(columns.T @ columns / HEIGHT**2 + precision)
         self.rate = to_rate @ posterior @ (columns.T @ self.y) / HEIGHT**2
         self.covariance = to_rate @ posterior @ to_rate.T
@@ -105,7 +104,7 @@ def test_kernel_share_equals_dense_algebra(problem):
     )
     expected = (squares * near).sum(axis=1) / squares.sum(axis=1)
     ours = kernel_share(problem.G, problem.spectrum, problem.damping, grid).ravel()
-    np.testing.assert_allclose(ours, expected, atol=1e-6)
+    np.testing.assert_allclose(ours, expected, atol=1e-4)  # filter factors below 1e-4 are left out
 
 
 def test_averaging_kernels_of_a_constant_sum_to_one(problem):
@@ -131,7 +130,7 @@ def test_iterative_solver_equals_dense(problem):
     iterative = decompose(problem.G, problem.y, problem.tau, problem.prior, rank=110)
     weight = problem.damping.weight
     np.testing.assert_allclose(iterative.solution(weight)[0], problem.spectrum.solution(weight)[0], atol=1e-8)
-    np.testing.assert_allclose(iterative.values, problem.spectrum.values[:110], rtol=1e-6)
+    np.testing.assert_allclose(iterative.values[:60], problem.spectrum.values[:60], rtol=1e-8)
 
 
 def test_large_grids_go_to_the_iterative_solver(problem, monkeypatch):
@@ -216,17 +215,21 @@ def test_no_heights_no_inversion(problem):
 
 
 def test_halving_spacing_and_step_keeps_the_answer():
-    """The prior is one on functions: with its numbers fixed, a grid twice as fine moves rates by less than sd/2."""
-    case = Problem(7)
-    network, tau = case.network, case.tau
-    object.__setattr__(network, "height", case.y)
-    options = InversionOptions(3e4, 1.5e6, choose="fixed", spread=SPREAD, height_sd=HEIGHT)
-    coarse_grid = make_grid(network, 6e3, age_nodes(tau.max() / 8, tau.max()))
-    fine_grid = make_grid(network, 3e3, age_nodes(tau.max() / 16, tau.max()))
-    coarse = invert(network, tau, coarse_grid, options)
-    fine = invert(network, tau, fine_grid, options)
-    at = {tuple(xy): i for i, xy in enumerate(fine_grid.place_xy)}
-    common = [(i, at[tuple(xy)]) for i, xy in enumerate(coarse_grid.place_xy) if tuple(xy) in at]
-    here, there = np.array(common).T
+    """The prior is one on functions: its numbers fixed, a grid twice as fine moves rates by less than sd/2."""
+    network = random_network(900, 7, step=1500.0)
+    tau = travel_time(network, 1e-6, 0.5)
+    range_space, range_time = 5e4, 0.6 * tau.max()
+    finest = make_grid(network, 2.5e3, age_nodes(tau.max() / 40, tau.max()))
+    rng = np.random.default_rng(1)
+    prior = make_prior(finest, range_space, range_time)
+    truth = 3e-4 + SPREAD * prior.root(rng.standard_normal(prior.n_modes))
+    noise = 20.0
+    heights = sensitivity(network, tau, finest) @ truth + noise * rng.standard_normal(network.n_nodes)
+    object.__setattr__(network, "height", heights)
+    options = InversionOptions(range_space, range_time, choose="fixed", spread=SPREAD, height_sd=noise)
+    coarse = invert(network, tau, make_grid(network, 8e3, age_nodes(tau.max() / 12, tau.max())), options)
+    fine = invert(network, tau, make_grid(network, 4e3, age_nodes(tau.max() / 24, tau.max())), options)
+    at = {tuple(xy): i for i, xy in enumerate(fine.grid.place_xy)}
+    here, there = np.array([(i, at[tuple(xy)]) for i, xy in enumerate(coarse.grid.place_xy) if tuple(xy) in at]).T
     change = np.abs(fine.rate[::2][:, there] - coarse.rate[:, here]) / coarse.rate_sd[:, here]
     assert np.mean(change[coarse.well_sampled[:, here]] < 0.5) > 0.95

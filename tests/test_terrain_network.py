@@ -5,7 +5,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from fluvinv.errors import InputError
+from fluvinv.errors import InputError, SettingsError
 from fluvinv.terrain import build_network, make_grid
 from fluvinv.terrain.channels import auto_channel_area
 
@@ -200,7 +200,7 @@ def test_the_order_of_nodes_on_random_ground(seed, shape, levels, threshold, dep
     try:
         network, report = build_network(grid, base_level=0.0, **options)
         refused = ""
-    except InputError as error:
+    except (InputError, SettingsError) as error:
         refused = str(error)
     if refused:
         assert "is above every basin" in refused
@@ -282,7 +282,7 @@ def test_no_sea_is_refused_with_counts_and_the_line_to_change():
 def test_a_channel_area_above_every_basin_is_refused_with_the_largest():
     grid = grid_of(rough_island())
     largest = build_network(grid)[1].largest_basin
-    with pytest.raises(InputError) as caught:
+    with pytest.raises(SettingsError) as caught:
         build_network(grid, channel_area=largest * 1.01)
     message = str(caught.value)
     assert message.startswith("terrain.channel_area_km2:")

@@ -5,7 +5,7 @@ import json
 import os
 import shutil
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from pathlib import Path
 
 from fluvinv.errors import OutputError
@@ -53,6 +53,7 @@ def check_target(folder: Path, inputs: list[Path], wanted: str, overwrite: bool)
     """
     try:
         if not folder.exists():
+            _check_parents(folder)
             return
         if not folder.is_dir():
             raise OutputError(f"{folder}: a file stands where the results folder should go. Choose another folder.")
@@ -81,6 +82,60 @@ def check_target(folder: Path, inputs: list[Path], wanted: str, overwrite: bool)
         )
 
 
+def _check_parents(folder: Path) -> None:
+    """Refuse a folder that would lie below a file."""
+    lowest = next(parent for parent in folder.absolute().parents if parent.exists())
+    if not lowest.is_dir():
+        raise OutputError(f"{folder}: cannot be made, for {lowest} is a file. Choose another folder.")
+
+
+def write_text(path: Path, text: str, overwrite: bool, inputs: list[Path]) -> None:
+    """Write a text file that appears complete or not at all, in a folder that is made where needed.
+
+    Raises
+    ------
+    OutputError
+        If the file is an input, exists and is not to be replaced, or cannot be written.
+    """
+    partial = path.with_name(f".{path.name}.{os.getpid()}.partial")
+    try:
+        if path.exists():
+            if any(path.samefile(item) for item in inputs):
+                raise OutputError(f"{path}: would replace the input of this name. Give --output another folder.")
+            if not overwrite:
+                raise OutputError(f"{path}: exists already. Give --overwrite to replace it, or another --output.")
+        _check_parents(path)
+        with _made_parents(path):
+            try:
+                partial.write_text(text, encoding="utf-8")
+                partial.replace(path)
+            finally:
+                partial.unlink(missing_ok=True)
+    except OSError as error:
+        raise _cannot_write(path, error) from error
+
+
+def _cannot_write(path: Path, error: OSError) -> OutputError:
+    """Turn what the file system said into an error of ours; one of ours stays as it is."""
+    if isinstance(error, OutputError):
+        return error
+    return OutputError(f"{path}: cannot be written: {error.strerror or error}.")
+
+
+@contextmanager
+def _made_parents(path: Path) -> Iterator[None]:
+    """Make the folders above a path, and take those that were made away again where the path does not come to be."""
+    missing = [parent for parent in path.parents if not parent.exists()]
+    try:
+        path.parent.mkdir(parents=True, exist_ok=True)
+        yield
+    finally:
+        if not path.exists():
+            with suppress(OSError):
+                for parent in missing:
+                    parent.rmdir()
+
+
 @contextmanager
 def results_folder(folder: Path) -> Iterator[Path]:
     """Yield a folder to write into that takes the final name when all went well, and vanishes otherwise.
@@ -95,39 +150,29 @@ def results_folder(folder: Path) -> Iterator[Path]:
     OutputError
         If something cannot be written.
     """
-    folder = folder.absolute()
-    made = [parent for parent in folder.parents if not parent.exists()]
-    staging = folder.parent / f".{folder.name}.{os.getpid()}.partial"
-    done = False
+    folder = folder.resolve()  # a link stays, and what it leads to is replaced
+    staging, old = (folder.with_name(f".{folder.name}.{os.getpid()}.{kind}") for kind in ("partial", "replaced"))
     try:
-        staging.mkdir(parents=True)
-        yield staging
-        _replace(folder, staging)
-        done = True
+        with _made_parents(folder):
+            try:
+                staging.mkdir()
+                yield staging
+                if folder.exists():
+                    folder.rename(old)
+                staging.rename(folder)
+            finally:
+                _put_right(folder, staging, old)
     except OSError as error:
-        if isinstance(error, OutputError):
-            raise
-        raise OutputError(f"{folder}: cannot be written: {error.strerror or error}.") from error
-    finally:
-        if not done:
-            shutil.rmtree(staging, ignore_errors=True)
-            for parent in made:
-                try:
-                    parent.rmdir()
-                except OSError:
-                    break
+        raise _cannot_write(folder, error) from error
 
 
-def _replace(folder: Path, staging: Path) -> None:
-    """Move the staged folder to its final name, what stood there out of the way first."""
-    if not folder.exists():
-        staging.rename(folder)
-        return
-    old = folder.parent / f".{folder.name}.{os.getpid()}.replaced"
-    folder.rename(old)
+def _put_right(folder: Path, staging: Path, old: Path) -> None:
+    """Leave one whole folder or none, wherever the work stopped; a second Ctrl-C in here does not stop it."""
     try:
-        staging.rename(folder)
-    except OSError:
-        old.rename(folder)
+        if old.exists() and not folder.exists():
+            old.rename(folder)
+        for leftover in (staging, old):
+            shutil.rmtree(leftover, ignore_errors=True)
+    except KeyboardInterrupt:
+        _put_right(folder, staging, old)
         raise
-    shutil.rmtree(old, ignore_errors=True)

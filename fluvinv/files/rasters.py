@@ -15,8 +15,13 @@ from fluvinv import __version__
 from fluvinv.errors import InputError, OutputError
 from fluvinv.files.cautions import CAUTIONS
 from fluvinv.inversion import UpliftGrid
-from fluvinv.terrain import Grid
+from fluvinv.terrain import Grid, make_grid
 from fluvinv.units import yr_to_myr
+
+#: Heights on Earth, with the ocean floor (m).
+LEAST_HEIGHT, MOST_HEIGHT = -12_000, 9_000
+#: A lowest height that lies this far (m) below all others is a fill value: no cliff is that high.
+FILL_GAP = 2_000
 
 
 @dataclass(frozen=True, slots=True)
@@ -40,18 +45,20 @@ class History:
 
 
 def _open(path: Path):
-    if not path.exists():
-        raise InputError(f"{path}: no such file.")
-    if path.is_dir():
-        raise InputError(f"{path}: a folder, and a raster file is expected.")
     try:
+        if not path.exists():
+            raise InputError(f"{path}: no such file.")
+        if path.is_dir():
+            raise InputError(f"{path}: a folder, and a raster file is expected.")
         return rasterio.open(path)
     except (RasterioIOError, NotGeoreferencedWarning) as error:
         raise InputError(f"{path}: cannot be read as a raster (GeoTIFF or another format that GDAL knows).") from error
+    except OSError as error:
+        raise InputError(f"{path}: cannot be read: {error.strerror}.") from error
 
 
 def read_dem(path: Path) -> Grid:
-    """Read a DEM of one band on a regular grid that is not rotated.
+    """Read a DEM of one band of heights in m on a regular grid that is not rotated.
 
     Parameters
     ----------
@@ -65,7 +72,8 @@ def read_dem(path: Path) -> Grid:
     Raises
     ------
     InputError
-        If the file is missing, no raster, has no CRS, several bands, a rotated grid or infinite heights.
+        If the file is missing, no raster, has no CRS, several bands, a rotated grid or values that are no heights;
+        and as `make_grid` says.
     """
     with rasterio.Env(), _open(path) as source:
         if source.count != 1:
@@ -84,16 +92,37 @@ def read_dem(path: Path) -> Grid:
             crs = pyproj.CRS.from_user_input(source.crs.to_wkt())
         except (RasterioError, pyproj.exceptions.CRSError) as error:
             raise InputError(f"{path}: damaged, the heights or their CRS cannot be read.") from error
+    _check_heights(path, masked)
     height = np.ma.filled(masked.astype(np.float32), np.nan)
-    if np.isinf(height).any():
-        raise InputError(f"{path}: holds {int(np.isinf(height).sum())} infinite heights.")
     x = transform.c + transform.a * (np.arange(height.shape[1]) + 0.5)
     y = transform.f + transform.e * (np.arange(height.shape[0]) + 0.5)
-    if transform.e > 0:
-        height, y = height[::-1], y[::-1]
-    if transform.a < 0:
-        height, x = height[:, ::-1], x[::-1]
-    return Grid(height=np.ascontiguousarray(height), void=np.isnan(height), x=x.copy(), y=y.copy(), crs=crs)
+    return make_grid(height, x, y, crs)
+
+
+def _check_heights(path: Path, masked: np.ma.MaskedArray) -> None:
+    """Refuse values that are no heights in m: infinite, beyond any on Earth, or fill values that nobody declared."""
+    if np.iscomplexobj(masked):
+        raise InputError(f"{path}: holds complex numbers, and heights in m are expected.")
+    values = masked.compressed()
+    values = values[~np.isnan(values)]
+    infinite = int(np.count_nonzero(np.isinf(values)))
+    if infinite:
+        raise InputError(f"{path}: holds {infinite:,} infinite heights. Declare them as nodata.")
+    if not values.size:
+        return
+    lowest, highest = values.min(), values.max()
+    if lowest < LEAST_HEIGHT or highest > MOST_HEIGHT:
+        outside = int(np.count_nonzero((values < LEAST_HEIGHT) | (values > MOST_HEIGHT)))
+        raise InputError(
+            f"{path}: {outside:,} cells lie outside the {LEAST_HEIGHT:,} to {MOST_HEIGHT:,} m of the Earth's relief"
+            f" (lowest {lowest:g}, highest {highest:g}). Declare fill values as nodata, or convert heights to metres."
+        )
+    above = values[values > lowest]
+    if above.size and above.min() - float(lowest) > FILL_GAP:
+        raise InputError(
+            f"{path}: {values.size - above.size:,} cells hold exactly {lowest:g}, and the next height is"
+            f" {above.min():g} m: a fill value, it seems. Declare it as nodata."
+        )
 
 
 def read_history(path: Path) -> History:

@@ -43,8 +43,12 @@ def _beside_the_settings(value: Any, info: ValidationInfo) -> Any:
 
 Text = Annotated[str, BeforeValidator(_text)]
 InputPath = Annotated[Path, BeforeValidator(_beside_the_settings)]
-AutoOrPositive = Literal["auto"] | Annotated[float, Field(gt=0)]
 LaterKey = done_so_far(Any, None)
+
+
+def auto_or(least: float, most: float) -> Any:
+    """Type of a key that is left to the program or is a number within limits that no sound run goes beyond."""
+    return Literal["auto"] | Annotated[float, Field(ge=least, le=most)]
 
 
 def plain_name(text: str) -> str:
@@ -122,7 +126,7 @@ class Terrain(_Section):
     depressions: Literal["carve", "fill"] = key(
         "carve", "closed hollows are passed by carving their rim or by filling them; for routing only"
     )
-    channel_area_km2: AutoOrPositive = key("auto", "upstream area at which a channel begins", "km2")
+    channel_area_km2: auto_or(1e-6, 1e7) = key("auto", "upstream area at which a channel begins", "km2")
     incomplete: Literal["drop", "keep", "complete"] = key(
         "drop",
         "rivers whose area is cut by the DEM's edge: drop, keep (with a warning), or complete (cut along the divide)",
@@ -177,15 +181,17 @@ class StreamPower(_Section):
 class UpliftGrid(_Section):
     """The map nodes and ages at which uplift rate is sought."""
 
-    spacing_km: AutoOrPositive = key("auto", "distance between map nodes", "km")
-    step_myr: AutoOrPositive = key("auto", "time between age nodes", "Myr")
-    duration_myr: AutoOrPositive = key("auto", "oldest age; auto: the longest travel time", "Myr")
+    spacing_km: auto_or(1e-3, 1e4) = key("auto", "distance between map nodes", "km")
+    step_myr: auto_or(1e-6, 5000) = key("auto", "time between age nodes", "Myr")
+    duration_myr: auto_or(1e-6, 5000) = key(
+        "auto", "oldest age; auto: the travel time that 99 % of river nodes stay below", "Myr"
+    )
 
 
 class Noise(_Section):
     """Misfit that is not uplift. `height_m` is None when it is estimated from the misfit."""
 
-    height_m: float | None = key(None, "standard deviation of white height error", "m", gt=0)
+    height_m: float | None = key(None, "standard deviation of white height error", "m", ge=1e-3, le=1e4)
     walk_m_per_sqrt_km: done_so_far(Annotated[float, Field(ge=0)], 0) = key(
         0.0, "random walk along the river", "m per square root of km"
     )
@@ -218,9 +224,9 @@ class Damping(_Section):
     choose: done_so_far(Literal["l-curve", "fixed", "evidence", "held-out"], "l-curve", "fixed") = key(
         "l-curve", "how damping is chosen: l-curve, or fixed with spread_mm_per_yr given"
     )
-    range_km: AutoOrPositive = key("auto", "distance over which rates are alike", "km")
-    range_myr: AutoOrPositive = key("auto", "time over which rates are alike", "Myr")
-    spread_mm_per_yr: AutoOrPositive = Field(
+    range_km: auto_or(1e-3, 1e6) = key("auto", "distance over which rates are alike", "km")
+    range_myr: auto_or(1e-6, 1e6) = key("auto", "time over which rates are alike", "Myr")
+    spread_mm_per_yr: auto_or(1e-6, 1e4) = Field(
         "auto",
         description="standard deviation of rates about their mean; auto with l-curve, a number with fixed",
         json_schema_extra={"unit": "mm/yr"},
@@ -247,7 +253,7 @@ class Rock(_Section):
     spread: done_so_far(Literal["estimated"] | Annotated[float, Field(ge=0)], 0) = key(
         0.0, "spread of unknown ln K from place to place; 0: none"
     )
-    range_km: done_so_far(AutoOrPositive, "auto") = key(
+    range_km: done_so_far(auto_or(1e-3, 1e6), "auto") = key(
         "auto", "distance over which unknown rock is alike; without effect at spread 0", "km"
     )
 

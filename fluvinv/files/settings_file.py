@@ -3,6 +3,7 @@
 import difflib
 import re
 from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass, field
 from functools import partial
 from pathlib import Path
@@ -14,7 +15,7 @@ from ruamel.yaml.error import YAMLError
 
 from fluvinv.errors import SettingsError
 from fluvinv.files.settings import Settings, build_settings
-from fluvinv.files.settings_keys import all_keys, expectation, shown
+from fluvinv.files.settings_keys import all_keys, expectation, naming_keys, shown
 
 _LARGEST = 1_000_000  # bytes
 _DEEPEST = 20  # levels; our own tree has three
@@ -51,6 +52,13 @@ def read_settings(path: str | Path) -> Settings:
     SettingsError
         With the first finding in file order, its line, what was found and what is expected.
     """
+    with open_settings(path) as settings:
+        return settings
+
+
+@contextmanager
+def open_settings(path: str | Path) -> Iterator[Settings]:
+    """Read settings as `read_settings` does; errors that begin with a key tell its line as long as they are open."""
     path = Path(path)
     document = _read_document(path.name, _read_text(path))
     findings = list(document.findings)
@@ -62,18 +70,23 @@ def read_settings(path: str | Path) -> Settings:
         for e in error.errors(include_url=False):
             errors.setdefault(_known_part(e), e)
         findings += [(document.place(key, e), partial(_message, key, e)) for key, e in errors.items()]
-    if not findings:
-        return settings
-    raise _first_of(path.name, findings)
+    if findings:
+        raise _first_of(path.name, findings)
+    places = {key: _where(path.name, document.places.get(key, _NOWHERE)) for key in _KNOWN}
+    with naming_keys({_dotted(key): f"{place}: {_dotted(key)}" for key, place in places.items()}):
+        yield settings
 
 
 def _first_of(name: str, findings: list[_Finding]) -> SettingsError:
     """Report the first finding in file order; what has no place (a key that is missing) comes last."""
     place, message = min(findings, key=lambda f: (f[0] == _NOWHERE, f[0]))
-    where = f"{name}, line {place[0]}" if place != _NOWHERE else name
     more = len(findings) - 1
     rest = f"\n{more} more {'finding' if more == 1 else 'findings'} after this one." if more else ""
-    return SettingsError(f"{where}: {message()}{rest}")
+    return SettingsError(f"{_where(name, place)}: {message()}{rest}")
+
+
+def _where(name: str, place: tuple[int, int]) -> str:
+    return name if place == _NOWHERE else f"{name}, line {place[0]}"
 
 
 def _read_text(path: Path) -> str:

@@ -1,6 +1,7 @@
 """What a settings key is: its default, unit, limits and meaning as data, and the words made from them."""
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 from types import NoneType, UnionType
@@ -10,12 +11,29 @@ from pydantic import AfterValidator, BaseModel, Field
 from pydantic.fields import FieldInfo
 from pydantic_core import PydanticCustomError
 
+from fluvinv.errors import InputError, SettingsError
+
 NOT_YET = "not done yet in this version"
 
 
 def problem(message: str) -> PydanticCustomError:
     """Wrap the text of a finding so that it reaches the user word for word, with the line of its key."""
     return PydanticCustomError("fluvinv", "{message}", {"message": message})
+
+
+@contextmanager
+def naming_keys(names: Mapping[str, str]) -> Iterator[None]:
+    """Say where a key stands in errors that begin with it.
+
+    Science names keys in its messages and knows no files; `names` maps a dotted key to what the user finds it by.
+    """
+    try:
+        yield
+    except (SettingsError, InputError) as error:
+        key, colon, rest = str(error).partition(":")
+        if key not in names:
+            raise
+        raise type(error)(f"{names[key]}{colon}{rest}") from error
 
 
 def shown(value: Any) -> str:

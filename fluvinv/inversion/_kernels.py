@@ -164,11 +164,17 @@ def running_moments(
 
 
 @njit(cache=True)
+def _four(table, i):
+    """Four numbers of a row as a tuple, which stays in registers."""
+    return table[i, 0], table[i, 1], table[i, 2], table[i, 3]
+
+
+@njit(cache=True)
 def _moments_at(
     time, segment, depth, path, path_tau, receiver, u, v, tau, base_u, base_v,
     seg_row, seg_col, seg_in, node_seg, node_m0, node_m1, m0, m1,
 ):  # fmt: skip
-    """Moments of a segment of the current path from its entry up to a travel time inside it."""
+    """Write the moments of a segment of the current path, from its entry up to a travel time inside it."""
     low = -1
     high = depth
     while high - low > 1:  # path_tau[low] <= time < path_tau[high]; -1 stands for the base point
@@ -182,55 +188,50 @@ def _moments_at(
     below = receiver[node]
     start = seg_in[segment]
     if below >= 0 and node_seg[below] == segment:
-        m0[:] = node_m0[below]
-        m1[:] = node_m1[below]
+        for corner in range(4):
+            m0[corner] = node_m0[below, corner]
+            m1[corner] = node_m1[below, corner]
         start = ta
     else:
-        m0[:] = 0.0
-        m1[:] = 0.0
-    if time <= start:
-        return
-    span = tau[node] - ta
-    sa = (start - ta) / span
-    sb = (time - ta) / span
-    du = u[node] - ua
-    dv = v[node] - va
-    _add_moments(
-        ua + sa * du, va + sa * dv, start, ua + sb * du, va + sb * dv, time,
-        seg_row[segment], seg_col[segment], seg_in[segment], m0, m1,
-    )  # fmt: skip
+        for corner in range(4):
+            m0[corner] = 0.0
+            m1[corner] = 0.0
+    if time > start:
+        span = tau[node] - ta
+        sa = (start - ta) / span
+        sb = (time - ta) / span
+        du = u[node] - ua
+        dv = v[node] - va
+        _add_moments(
+            ua + sa * du, va + sa * dv, start, ua + sb * du, va + sb * dv, time,
+            seg_row[segment], seg_col[segment], seg_in[segment], m0, m1,
+        )  # fmt: skip
 
 
 @njit(cache=True)
-def _spread_piece(
-    total, row, col, tau_in, upper0, upper1, lower0, lower1, age_index, ages, place, n_places,
-    begin, fill, slot, indices, data,
-):  # fmt: skip
-    """Share a piece inside one map cell and one age step out to its four places and two ages."""
-    last = ages.size - 1
-    for corner in range(4):
-        d0 = upper0[corner] - lower0[corner]
-        if d0 <= 0.0:  # outside the cell's reach, or rounding where a piece has no length
-            continue
-        older = 0.0
-        if age_index < last:
-            d1 = upper1[corner] - lower1[corner]
-            width = ages[age_index + 1] - ages[age_index]
-            older = ((total - tau_in - ages[age_index]) * d0 - d1) / width
-            older = min(max(older, 0.0), d0)
-        column = age_index * n_places + place[row + corner // 2, col + corner % 2]
-        for part in range(2):
-            weight = older if part else d0 - older
-            if weight > 0.0:
-                position = slot[column]
-                if position < begin or position >= fill or indices[position] != column:
-                    position = fill
-                    fill += 1
-                    slot[column] = position
-                    indices[position] = column
-                    data[position] = 0.0
-                data[position] += weight
-            column += n_places
+def _share_out(d0, d1, lever, per_width, column, to_older, row_sum, touched, count):
+    """Share a piece's moments at one place out to two ages; return the new length of the list of touched columns.
+
+    The lever is the age at the segment's entry less the younger of the two ages.
+    """
+    d0 = max(d0, 0.0)  # rounding, where a piece has no length or runs along the cell's far side
+    older = min(max((lever * d0 - d1) * per_width, 0.0), d0)
+    row_sum[column] += d0 - older
+    row_sum[column + to_older] += older
+    touched[count] = column
+    touched[count + 1] = column + to_older
+    return count + 2
+
+
+@njit(cache=True)
+def _collect(row_sum, touched, count, fill, indices, data):
+    """Move the touched columns of the dense row to the sparse one, leaving zeros behind."""
+    for k in range(count):
+        column = touched[k]
+        indices[fill] = column
+        data[fill] = row_sum[column]
+        fill += row_sum[column] > 0.0  # a double finds the zero that was left behind
+        row_sum[column] = 0.0
     return fill
 
 
@@ -238,50 +239,56 @@ def _spread_piece(
 def fill_rows(
     first, stop, depth_of, path, path_tau, receiver, u, v, tau, base_u, base_v,
     seg_row, seg_col, seg_in, seg_below, seg_m0, seg_m1, node_seg, node_m0, node_m1,
-    ages, place, n_places, slot, indptr, indices, data,
+    ages, place, n_places, row_sum, touched, indptr, indices, data,
 ):  # fmt: skip
     """Write the rows of nodes first to stop - 1; path and path_tau carry on from the rows before.
 
     A row walks the segments of its path from the node down. Inside a segment, age breaks are found by
     bisection on the path, which a depth-first traversal keeps on a stack.
     """
-    upper0, upper1 = np.empty(4), np.empty(4)
-    lower0, lower1 = np.empty(4), np.empty(4)
-    zero = np.zeros(4)
+    m0, m1 = np.empty(4), np.empty(4)
+    last = ages.size - 1
     fill = 0
     for node in range(first, stop):
         depth = depth_of[node]
         path[depth] = node
         path_tau[depth] = tau[node]
         total = tau[node]
-        begin = fill
+        count = 0
         age_index = 0
         segment = node_seg[node]
-        upper0[:] = node_m0[node]
-        upper1[:] = node_m1[node]
+        upper0, upper1 = _four(node_m0, node), _four(node_m1, node)
         while segment >= 0:
-            row, col, tau_in = seg_row[segment], seg_col[segment], seg_in[segment]
-            while age_index < ages.size - 1 and total - ages[age_index + 1] > tau_in:
-                _moments_at(
-                    total - ages[age_index + 1], segment, depth, path, path_tau, receiver, u, v, tau,
-                    base_u, base_v, seg_row, seg_col, seg_in, node_seg, node_m0, node_m1, lower0, lower1,
-                )  # fmt: skip
-                fill = _spread_piece(
-                    total, row, col, tau_in, upper0, upper1, lower0, lower1, age_index, ages, place,
-                    n_places, begin, fill, slot, indices, data,
-                )  # fmt: skip
-                upper0[:] = lower0
-                upper1[:] = lower1
-                age_index += 1
-            fill = _spread_piece(
-                total, row, col, tau_in, upper0, upper1, zero, zero, age_index, ages, place,
-                n_places, begin, fill, slot, indices, data,
-            )  # fmt: skip
-            upper0[:] = seg_m0[segment]
-            upper1[:] = seg_m1[segment]
+            row, col, age_in = seg_row[segment], seg_col[segment], total - seg_in[segment]
+            corners = place[row, col], place[row, col + 1], place[row + 1, col], place[row + 1, col + 1]
+            cut = True
+            while cut:
+                cut = age_index < last and age_in > ages[age_index + 1]
+                if cut:
+                    _moments_at(
+                        total - ages[age_index + 1], segment, depth, path, path_tau, receiver, u, v, tau,
+                        base_u, base_v, seg_row, seg_col, seg_in, node_seg, node_m0, node_m1, m0, m1,
+                    )  # fmt: skip
+                else:
+                    m0[:] = 0.0
+                    m1[:] = 0.0
+                to_older, per_width = 0, 0.0  # beyond the last age everything counts with it
+                if age_index < last:
+                    to_older, per_width = n_places, 1.0 / (ages[age_index + 1] - ages[age_index])
+                lever = age_in - ages[age_index]
+                column = age_index * n_places
+                for corner in range(4):
+                    count = _share_out(
+                        upper0[corner] - m0[corner], upper1[corner] - m1[corner], lever, per_width,
+                        column + corners[corner], to_older, row_sum, touched, count,
+                    )  # fmt: skip
+                if cut:
+                    upper0, upper1 = (m0[0], m0[1], m0[2], m0[3]), (m1[0], m1[1], m1[2], m1[3])
+                    age_index += 1
+            upper0, upper1 = _four(seg_m0, segment), _four(seg_m1, segment)
             segment = seg_below[segment]
+        fill = _collect(row_sum, touched, count, fill, indices, data)
         indptr[node - first + 1] = fill
-    return fill
 
 
 @njit(cache=True)

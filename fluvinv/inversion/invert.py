@@ -206,8 +206,8 @@ def _decompose_and_choose(rows, y, tau, prior: FieldPrior, options: InversionOpt
             return spectrum, damping, curve
         if rank >= _LAST_RANK:
             raise NumericalError(
-                f"the heights determine more than {rank} numbers, and the prior has {prior.n_modes} modes on this grid."
-                f" Choose longer ranges or a coarser grid (up to {DENSE_LIMIT} modes are solved whole), or more damping."
+                f"the heights determine more than {rank} numbers, and the prior has {prior.n_modes} modes on this"
+                f" grid. Choose longer ranges or a coarser grid (up to {DENSE_LIMIT} modes are solved whole) or damp more."
             )
         rank *= 2
 

@@ -1,7 +1,6 @@
 """What is known after the inversion: standard deviations, and where an average is an average of the truth."""
 
 import numpy as np
-
 from scipy import sparse
 
 from fluvinv.inversion.choose import Damping
@@ -15,8 +14,8 @@ RESOLVED_SHARE = 0.4
 def standard_deviation(spectrum: Spectrum, damping: Damping, grid: UpliftGrid, mix: np.ndarray) -> np.ndarray:
     r"""Posterior standard deviation of linear mixtures over age of the rate at each place.
 
-    The posterior covariance of the field is spread^2 (R - Z F Z') with R the prior's correlation, Z = S V and F the filter
-    factors (Tarantola 2005, eq. 3.38, in spectral form). The free background adds its own part:
+    The posterior covariance of the field is spread^2 (R - Z F Z') with R the prior's correlation, Z = S V and
+    F the filter factors (Tarantola 2005, eq. 3.38, in spectral form). The free background adds its own part:
     u = (1 - 1 g') f + error of the background, of variance height_sd^2 / tau'tau.
 
     Parameters

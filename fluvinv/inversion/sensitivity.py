@@ -7,6 +7,7 @@ from fluvinv.inversion import _kernels
 from fluvinv.inversion.uplift_grid import UpliftGrid, base_points
 from fluvinv.network import RiverNetwork
 
+#: Rows per compiled call; an interrupt is seen between calls only.
 _ROWS_AT_ONCE = 20_000
 
 
@@ -72,31 +73,25 @@ def sensitivity(network: RiverNetwork, tau: np.ndarray, grid: UpliftGrid) -> spa
     depth = _depth(network.receiver)
     path = np.empty(int(depth.max()) + 1, dtype=np.int32)
     path_tau = np.empty(path.size)
-    slot = np.full(grid.n_unknowns, -1, dtype=np.int64)
+    row_sum = np.zeros(grid.n_unknowns)
     breaks = np.searchsorted(grid.ages[1:], tau, side="left")
     bound = 8 * (moments.rank[moments.node_segment].astype(np.int64) + breaks)
-    chunks = []
+    touched = np.empty(int(bound.max()), dtype=np.int32)
+    # Room for the most that there can be. What is not written to is given back; it never took real memory.
+    indices, data = np.empty(int(bound.sum()), dtype=np.int32), np.empty(int(bound.sum()))
+    indptr = np.zeros(network.n_nodes + 1, dtype=np.int64)
     for first in range(0, network.n_nodes, _ROWS_AT_ONCE):
         stop = min(first + _ROWS_AT_ONCE, network.n_nodes)
-        room = int(bound[first:stop].sum())
-        indptr = np.zeros(stop - first + 1, dtype=np.int64)
-        indices, data = np.empty(room, dtype=np.int32), np.empty(room)
-        slot[:] = -1
-        filled = _kernels.fill_rows(
+        begin = indptr[first]
+        _kernels.fill_rows(
             first, stop, depth, path, path_tau, network.receiver, moments.u, moments.v, tau,
             moments.base_u, moments.base_v, *moments.cells, *moments.links, *moments.nodes,
-            grid.ages, grid.place, grid.n_places, slot, indptr, indices, data,
+            grid.ages, grid.place, grid.n_places, row_sum, touched,
+            indptr[first : stop + 1], indices[begin:], data[begin:],
         )  # fmt: skip
-        chunks.append((indptr, indices[:filled].copy(), data[:filled].copy()))
-    return _join(chunks, (network.n_nodes, grid.n_unknowns))
-
-
-def _join(chunks, shape) -> sparse.csr_array:
-    """Stack chunks of rows (row pointers, columns, values) into one matrix."""
-    ends = np.cumsum([0] + [chunk[0][-1] for chunk in chunks])
-    indptr = np.concatenate([[0]] + [chunk[0][1:] + end for chunk, end in zip(chunks, ends, strict=False)])
-    indices = np.concatenate([chunk[1] for chunk in chunks])
-    data = np.concatenate([chunk[2] for chunk in chunks])
+        indptr[first + 1 : stop + 1] += begin
+    indices.resize(indptr[-1], refcheck=False)
+    data.resize(indptr[-1], refcheck=False)
     if indptr[-1] < np.iinfo(np.int32).max:
         indptr = indptr.astype(np.int32)
-    return sparse.csr_array((data, indices, indptr), shape=shape)
+    return sparse.csr_array((data, indices, indptr), shape=(network.n_nodes, grid.n_unknowns))

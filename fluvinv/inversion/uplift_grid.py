@@ -153,14 +153,23 @@ def make_grid(network: RiverNetwork, spacing: float, ages: np.ndarray) -> Uplift
     return UpliftGrid(bare.west, bare.north, bare.spacing, n_rows, n_cols, bare.ages, place)
 
 
-def suggest_spacing(area: float, n_places: int = 300) -> float:
+def suggest_spacing(area: float, n_places: int = 120) -> float:
     """Map spacing (m) that lays about `n_places` map nodes over an area (m2)."""
     return nice_number(np.sqrt(area / n_places))
 
 
-def suggest_step(longest: float, n_steps: int = 12) -> float:
+def suggest_step(longest: float, n_steps: int = 8) -> float:
     """Age step (yr) that divides the longest travel time (yr) into about `n_steps`."""
     return nice_number(longest / n_steps)
+
+
+def suggest_duration(tau: np.ndarray) -> float:
+    """Duration (yr) that 99 % of the travel times stay below.
+
+    The few nodes beyond it are mostly headwaters that lost area to a moving divide: their travel times are
+    too long, and ages of their own would be made of nothing else.
+    """
+    return float(np.quantile(tau, 0.99))
 
 
 def suggest_ranges(network: RiverNetwork, tau: np.ndarray) -> tuple[float, float]:

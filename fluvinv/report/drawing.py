@@ -14,6 +14,7 @@ INK = "#26323a"
 FAINT = "#9aa7ad"
 WATER = "#2b6f97"
 ACCENT = "#b5432e"
+HATCH = "#5d676d"
 #: Distinct without colour vision trouble, dark enough on white; for the largest basins in turn.
 BASIN_COLOURS = ("#2b6f97", "#b5432e", "#5c7f2b", "#7a4f99", "#b07a1e", "#3c3c3c")
 
@@ -30,8 +31,7 @@ STYLE = {
     "axes.spines.top": False,
     "axes.spines.right": False,
     "legend.frameon": False,
-    "hatch.linewidth": 0.6,
-    "hatch.color": "#6b757b",
+    "hatch.linewidth": 0.5,
 }
 
 
@@ -81,6 +81,13 @@ def frame_map(axes, network: RiverNetwork, margin: float = 0.04) -> None:
     axes.set_yticks([])
     for spine in axes.spines.values():
         spine.set_visible(False)
+
+
+def map_height(network: RiverNetwork, width: float) -> float:
+    """Height (inches) of a figure whose map is so wide, with room for a title."""
+    x = np.concatenate([network.map_x, network.base_map_x])
+    y = np.concatenate([network.map_y, network.base_map_y])
+    return float(np.clip(width * np.ptp(y) / max(np.ptp(x), 1.0), 2.5, 9.0)) + 0.6
 
 
 def scale_bar(axes) -> None:

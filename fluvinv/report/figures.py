@@ -3,17 +3,22 @@
 import numpy as np
 from matplotlib.collections import LineCollection
 from matplotlib.figure import Figure
-from matplotlib.patches import Patch
+from matplotlib.patches import Patch, PathPatch
+from matplotlib.path import Path as MplPath
+from matplotlib.ticker import LogLocator, NullFormatter, ScalarFormatter
+from matplotlib.transforms import Affine2D
 
 from fluvinv.inversion import Inversion
 from fluvinv.network import RiverNetwork
 from fluvinv.report.drawing import (
     ACCENT,
     FAINT,
+    HATCH,
     INK,
     WATER,
     draw_rivers,
     frame_map,
+    map_height,
     new_figure,
     north_arrow,
     river_lines,
@@ -37,6 +42,22 @@ def _cell_edges(inversion: Inversion) -> tuple[np.ndarray, np.ndarray]:
     return np.append(grid.x - half, grid.x[-1] + half) / 1e3, np.append(grid.y + half, grid.y[-1] - half) / 1e3
 
 
+def _hatch_cells(axes, edges, where: np.ndarray) -> None:
+    """Hatch the map cells where a (n_rows, n_cols) bool array is true."""
+    x, y = edges
+    rows, cols = np.nonzero(where)
+    squares = [MplPath.unit_rectangle().transformed(_cell_to_map(x, y, r, c)) for r, c in zip(rows, cols, strict=True)]
+    if squares:
+        outline = PathPatch(
+            MplPath.make_compound_path(*squares), facecolor="none", edgecolor=HATCH, hatch="////", linewidth=0
+        )
+        axes.add_patch(outline)
+
+
+def _cell_to_map(x, y, row, col) -> Affine2D:
+    return Affine2D().scale(x[col + 1] - x[col], y[row + 1] - y[row]).translate(x[col], y[row])
+
+
 def uplift_history(inversion: Inversion, network: RiverNetwork) -> Figure:
     """Small multiples of the uplift rate, one colour scale, hatched where not resolved."""
     grid = inversion.grid
@@ -46,40 +67,38 @@ def uplift_history(inversion: Inversion, network: RiverNetwork) -> Figure:
     aspect = (np.ptp(grid.y) + grid.spacing) / (np.ptp(grid.x) + grid.spacing)
     n_rows, n_cols = _panel_grid(shown.size, aspect)
     width = 9.5
-    figure = new_figure(width, min(14.0, max(3.0, width / n_cols * aspect * n_rows * 1.12 + 0.9)))
+    figure = new_figure(width, min(14.0, max(3.0, (width / n_cols * aspect + 0.35) * n_rows + 1.0)))
     low, high = min(0.0, np.nanmin(stack)), max(np.nanmax(stack), 1e-12)
     edges = _cell_edges(inversion)
     all_axes = np.atleast_1d(figure.subplots(n_rows, n_cols, squeeze=False)).ravel()
     for axes, age in zip(all_axes, shown, strict=False):
         image = axes.pcolormesh(*edges, stack[age], cmap=RATE_COLOURS, vmin=low, vmax=high, rasterized=True)
-        hidden = np.ma.masked_where(~(resolved[age] == 0), np.ones_like(stack[age]))
-        axes.pcolor(*edges, hidden, hatch="////", alpha=0.0, linewidth=0)
-        draw_rivers(axes, network, colour=WATER, width=0.25)
-        frame_map(axes, network)
+        draw_rivers(axes, network, colour=WATER, width=0.2)
+        _hatch_cells(axes, edges, resolved[age] == 0)
+        frame_map(axes, network, margin=0.07)
         axes.set_title(f"{yr_to_myr(grid.ages[age]):.3g} Ma")
     for axes in all_axes[shown.size :]:
         axes.set_visible(False)
     scale_bar(all_axes[0])
     north_arrow(all_axes[0])
-    figure.colorbar(
-        image, ax=all_axes.tolist(), orientation="horizontal", fraction=0.04, aspect=50, label="uplift rate (mm/yr)"
-    )
-    figure.legend(
-        handles=[Patch(facecolor="white", edgecolor=INK, hatch="////", label="not resolved")], loc="outside upper right"
-    )
+    bar = figure.colorbar(image, ax=all_axes.tolist(), orientation="horizontal", fraction=0.04, aspect=50)
+    bar.set_label("uplift rate (mm/yr)")
+    key = Patch(facecolor="white", edgecolor=HATCH, hatch="////", label="not resolved")
+    figure.legend(handles=[key], loc="outside lower right")
     return figure
 
 
-def _spread_places(inversion: Inversion, n_places: int) -> list[int]:
-    """Well-sampled places far from one another: the best sampled first, then always the farthest."""
-    total = inversion.sampled.sum(axis=0)
-    candidates = np.flatnonzero(total >= np.quantile(total, 0.6))
+def _spread_places(inversion: Inversion) -> list[int]:
+    """Up to six places over the whole map: in each third from west to east, north and south, the best resolved."""
     xy = inversion.grid.place_xy
-    chosen = [int(candidates[np.argmax(total[candidates])])]
-    while len(chosen) < min(n_places, candidates.size):
-        gap = np.min(np.hypot(*(xy[candidates, None] - xy[None, chosen]).transpose(2, 0, 1)), axis=1)
-        chosen.append(int(candidates[np.argmax(gap)]))
-    return chosen
+    order = np.lexsort((inversion.sampled.sum(axis=0), inversion.resolved.sum(axis=0)))
+    rank = np.empty(order.size)
+    rank[order] = np.arange(order.size)
+    chosen = []
+    for third in np.array_split(np.argsort(xy[:, 0], kind="stable"), min(3, order.size)):
+        by_row = third[np.argsort(-xy[third, 1], kind="stable")]
+        chosen += [int(half[np.argmax(rank[half])]) for half in np.array_split(by_row, 2) if half.size]
+    return sorted(chosen, key=lambda place: (-xy[place, 1] > -np.median(xy[:, 1]), xy[place, 0]))
 
 
 def histories(inversion: Inversion, network: RiverNetwork, known: np.ndarray | None = None) -> Figure:
@@ -88,7 +107,7 @@ def histories(inversion: Inversion, network: RiverNetwork, known: np.ndarray | N
     `known` is a known history to compare with, (n_ages, n_places) in m/yr.
     """
     grid = inversion.grid
-    chosen = _spread_places(inversion, 6)
+    chosen = _spread_places(inversion)
     ages = yr_to_myr(grid.ages)
     figure = new_figure(9.5, 5.6)
     mosaic = figure.subplot_mosaic([["map", "A", "B", "C"], ["map", "D", "E", "F"]], width_ratios=[1.5, 1, 1, 1])
@@ -126,7 +145,7 @@ def histories(inversion: Inversion, network: RiverNetwork, known: np.ndarray | N
 
 def misfit_map(residual: np.ndarray, network: RiverNetwork) -> Figure:
     """Observed minus fitted height along the rivers."""
-    figure = new_figure(7.5, 6)
+    figure = new_figure(7.5, map_height(network, 6.4))
     axes = figure.subplots()
     upper = np.flatnonzero(network.receiver >= 0)
     limit = max(float(np.quantile(np.abs(residual), 0.98)), 1e-9)
@@ -154,6 +173,9 @@ def trade_off(inversion: Inversion) -> Figure:
     left, right = figure.subplots(1, 2)
     left.loglog(rms, m_per_yr_to_mm_per_yr(curve.rough_norm), color=INK, linewidth=1.4)
     left.plot(rms[at], m_per_yr_to_mm_per_yr(curve.rough_norm[at]), "o", color=ACCENT, label="corner, chosen")
+    left.xaxis.set_major_locator(LogLocator(base=10, subs=(1.0, 2.0, 5.0)))
+    left.xaxis.set_major_formatter(ScalarFormatter())
+    left.xaxis.set_minor_formatter(NullFormatter())
     left.set_xlabel("misfit, rms (m)")
     left.set_ylabel("norm of the departure from\nthe background rate (mm/yr)")
     left.legend()

@@ -13,6 +13,7 @@ from fluvinv.report.drawing import (
     WATER,
     draw_rivers,
     frame_map,
+    map_height,
     new_figure,
     north_arrow,
     scale_bar,
@@ -44,7 +45,7 @@ def _plot_basin(axes, network, basin, x, y, colour, width=0.5, style="-"):
 
 def network_map(network: RiverNetwork) -> Figure:
     """Rivers by Strahler order, with the outlets."""
-    figure = new_figure(7.5, 6)
+    figure = new_figure(7.5, map_height(network, 7.2))
     axes = figure.subplots()
     draw_rivers(axes, network, colour=WATER, width=0.7)
     size = 4 + 60 * np.sqrt(network.area[network.outlet] / network.area.max())
@@ -68,11 +69,11 @@ def long_profiles(network: RiverNetwork, fitted: np.ndarray | None = None) -> Fi
     figure = new_figure(3.2 * n_cols + 0.4, 2.4 * n_rows + 0.5)
     all_axes = figure.subplots(n_rows, n_cols, squeeze=False, sharey=True).ravel()
     for axes, basin in zip(all_axes, basins, strict=False):
-        _plot_basin(axes, network, basin, m_to_km(network.distance), network.height, INK, width=0.7)
         if fitted is not None:
-            _plot_basin(axes, network, basin, m_to_km(network.distance), fitted, ACCENT, width=0.7)
+            _plot_basin(axes, network, basin, m_to_km(network.distance), fitted, ACCENT, width=1.4)
+        _plot_basin(axes, network, basin, m_to_km(network.distance), network.height, INK, width=0.5)
         area = m2_to_km2(network.area[network.outlet[basin]])
-        axes.set_title(f"basin {network.basin_id[network.outlet[basin]]}: {area:,.3g} km²")
+        axes.set_title(f"basin {network.basin_id[network.outlet[basin]]}: {area:,.0f} km²")
         axes.set_xlabel("distance from the outlet (km)")
     for axes in all_axes[basins.size :]:
         axes.set_visible(False)

@@ -5,9 +5,9 @@ from dataclasses import dataclass
 import numpy as np
 from pyproj import CRS
 
-from fluvinv.errors import InputError
+from fluvinv.errors import InputError, SettingsError
 from fluvinv.network import RiverNetwork
-from fluvinv.terrain.channels import auto_channel_area, connect_channels
+from fluvinv.terrain.channels import LEAST_CELLS, auto_channel_area, connect_channels
 from fluvinv.terrain.completeness import CUT_BY_EDGE, CUT_BY_VOID, Drainage, drain
 from fluvinv.terrain.grid import Grid
 from fluvinv.terrain.routing import NOT_LAND, route
@@ -114,7 +114,7 @@ def build_network(
     InputError
         If nothing is left to build a network from; the message counts what was lost where.
     SettingsError
-        If the projection cannot be used.
+        If the projection cannot be used, or a given channel area is above every basin.
     """
     sea, sea_report = find_sea(grid, base_level, nodata)
     receiver = route(grid, sea, base_level, depressions)
@@ -131,6 +131,8 @@ def build_network(
     channel = land & (drainage.area >= threshold)
     not_usable = _count_reasons(drainage, channel & ~usable)
     if not (channel & allowed).any():
+        if not any(not_usable.values()):
+            raise _no_basin_is_large_enough(drainage, threshold, channel_area == "auto")
         raise InputError(_no_channel_message(drainage, threshold, usable, not_usable))
     network, map_crs = connect_channels(grid, receiver, drainage, channel & allowed, base_level, projection)
     report = TerrainReport(
@@ -179,16 +181,23 @@ def _no_sea_message(receiver: np.ndarray, drainage: Drainage, base_level: float)
     )
 
 
+def _no_basin_is_large_enough(drainage: Drainage, threshold: float, auto: bool) -> InputError | SettingsError:
+    """The error for a threshold above every basin: the settings' fault when set, the DEM's when not."""
+    area, largest = (f"{m2_to_km2(a):.6g} km2" for a in (threshold, drainage.area[drainage.order].max()))
+    if auto:
+        return InputError(
+            f"catchment.dem: no basin is large enough for a river; the largest drains {largest}, and channels begin "
+            f"at {LEAST_CELLS} cells ({area}). Take a larger or finer DEM, or set terrain.channel_area_km2."
+        )
+    return SettingsError(
+        f"terrain.channel_area_km2: {area} is above every basin; the largest drains {largest}. Set a smaller area."
+    )
+
+
 def _no_channel_message(drainage: Drainage, threshold: float, usable: np.ndarray, not_usable: dict[str, int]) -> str:
-    """Why no channel node is left: the threshold is above every basin, or no basin above it is complete."""
+    """Why no channel node is left: no basin above the threshold is complete."""
     edge, void, below = not_usable.values()
     area_km2 = f"{m2_to_km2(threshold):.6g}"
-    if edge + void + below == 0:
-        largest = m2_to_km2(drainage.area[drainage.order].max())
-        return (
-            f"terrain.channel_area_km2: {area_km2} km2 is above every basin; the largest drains {largest:.6g} "
-            "km2. Set a smaller area."
-        )
     if usable.any():
         largest = m2_to_km2(drainage.area[usable].max())
         rest = f"The largest complete basin drains {largest:.6g} km2; a smaller terrain.channel_area_km2 takes it in. "

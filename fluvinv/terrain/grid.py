@@ -155,7 +155,8 @@ def make_grid(height, x, y, crs, void=None) -> Grid:
     Raises
     ------
     InputError
-        If the CRS is neither geographic nor projected, or the grid is too small, too large or uneven.
+        If the CRS is neither geographic nor projected, the grid is too small, too large or uneven, or its
+        latitudes are none.
     """
     crs = CRS.from_user_input(crs)
     if not (crs.is_geographic or crs.is_projected):
@@ -173,6 +174,11 @@ def make_grid(height, x, y, crs, void=None) -> Grid:
     void = ~np.isfinite(height) if void is None else np.asarray(void, dtype=bool) | ~np.isfinite(height)
     along_x = slice(None, None, -1) if _spacing(x, "columns") < 0 else slice(None)
     along_y = slice(None, None, -1) if _spacing(y, "rows") > 0 else slice(None)
+    if crs.is_geographic and np.abs(y * _unit(crs)).max() >= np.pi / 2:
+        raise InputError(
+            f"catchment.dem: its rows run from {y.min():g} to {y.max():g}, which are no latitudes between the poles, "
+            f"but its CRS '{crs.name}' is geographic. Give the file the CRS that it was made in."
+        )
     height, void = (np.ascontiguousarray(a[along_y, along_x]) for a in (height, void))
     return Grid(height, void, x[along_x], y[along_y], crs)
 
