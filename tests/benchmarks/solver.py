@@ -6,19 +6,19 @@ prior: a dense solution that needs all directions cannot be cheaper.
 """
 
 import time
+from itertools import pairwise
 
 import numpy as np
+from rows import AREA_EXPONENT, ERODIBILITY, island
 from scipy import linalg
 
 from fluvinv.inversion import InversionOptions, age_nodes, invert, make_grid
 from fluvinv.inversion.prior import make_prior
-from fluvinv.inversion.solve import DENSE_LIMIT
 from fluvinv.streampower import travel_time
-from rows import AREA_EXPONENT, ERODIBILITY, island
 
 N_CELLS = 220
-#: Map spacing (km), age steps and the share of the network's reach that a range spans.
-SIZES = ((25.0, 8, 0.7), (15.0, 12, 0.4), (10.0, 16, 0.3), (7.0, 20, 0.2), (5.0, 24, 0.15), (4.0, 30, 0.13))
+#: Map spacing (km), age steps, and the prior's ranges as a share of the network's width and longest travel time.
+SIZES = ((25.0, 6, 0.7), (20.0, 8, 0.5), (15.0, 8, 0.4), (12.0, 10, 0.3), (10.0, 12, 0.3))
 
 
 def eigh_seconds(n: int) -> float:
@@ -36,7 +36,7 @@ def timed_inversion(network, tau, grid, options) -> dict[str, float]:
     invert(network, tau, grid, options, lambda step: marks.append((step, time.perf_counter())))
     marks.append(("end", time.perf_counter()))
     seconds: dict[str, float] = {}
-    for (step, began), (_, ended) in zip(marks, marks[1:], strict=False):
+    for (step, began), (_, ended) in pairwise(marks):
         seconds[step] = seconds.get(step, 0.0) + ended - began
     return seconds
 
@@ -59,10 +59,11 @@ def main() -> None:
         seconds = timed_inversion(network, tau, grid, options)
         yardstick = eigh_seconds(modes)
         work = seconds["decomposition"] + seconds["errors"]
+        steps = " ".join(
+            f"{name} {seconds[name]:.2f} s," for name in ("rows", "decomposition", "damping", "errors")
+        )
         print(
-            f"{grid.n_unknowns:8,} {modes:6,}  {'dense' if modes <= DENSE_LIMIT else 'iterative':9}"
-            f"{seconds['rows']:6.2f} {seconds['decomposition']:14.2f} {seconds['damping']:8.2f} {seconds['errors']:7.2f}"
-            f"{yardstick:6.2f} {work / yardstick:12.1f}",
+            f"{grid.n_unknowns:8,} {modes:6,}  {steps} eigh {yardstick:.2f} s, ratio {work / yardstick:.1f}",
             flush=True,
         )
 
