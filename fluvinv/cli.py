@@ -134,15 +134,10 @@ def main(arguments: list[str] | None = None) -> int:
     """
     arguments = sys.argv[1:] if arguments is None else arguments
     verbose = "-v" in arguments or "--verbose" in arguments
-    before = {number: signal.signal(number, _interrupt) for number in (signal.SIGINT, signal.SIGTERM)}
-    try:
-        with warnings.catch_warnings():
-            if not sys.warnoptions:  # remarks of libraries are for who develops: python -W shows them
-                warnings.simplefilter("ignore")
-            return _run(arguments, verbose)
-    finally:
-        for number, handler in before.items():
-            signal.signal(number, handler)
+    with warnings.catch_warnings():
+        if not sys.warnoptions:  # remarks of libraries are for developers: python -W shows them
+            warnings.simplefilter("ignore")
+        return _run(arguments, verbose)
 
 
 def _run(arguments: list[str], verbose: bool) -> int:
@@ -176,5 +171,15 @@ def _run(arguments: list[str], verbose: bool) -> int:
 
 
 def script() -> None:
-    """Entry point of the installed command."""
-    sys.exit(main())
+    """Entry point of the installed command: `main` in a process of its own, which signals may stop."""
+    stopping = (signal.SIGINT, signal.SIGTERM)
+    for number in stopping:
+        signal.signal(number, _interrupt)
+    try:
+        code = main()
+    except KeyboardInterrupt:  # a second one, while the first was being answered
+        code = INTERRUPTED
+    finally:
+        for number in stopping:
+            signal.signal(number, signal.SIG_IGN)
+    sys.exit(code)

@@ -3,6 +3,7 @@
 from fluvinv.inversion.compare import Comparison, compare, history_at_nodes
 from fluvinv.inversion.cost import Cost, predict_cost
 from fluvinv.inversion.invert import Inversion, InversionOptions, invert
+from fluvinv.inversion.prior import make_prior
 from fluvinv.inversion.sensitivity import sensitivity
 from fluvinv.inversion.solve import DENSE_LIMIT
 from fluvinv.inversion.uplift_grid import (
@@ -28,6 +29,7 @@ __all__ = [
     "history_at_nodes",
     "invert",
     "make_grid",
+    "make_prior",
     "nice_number",
     "predict_cost",
     "sensitivity",

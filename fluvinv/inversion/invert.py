@@ -207,7 +207,7 @@ def _decompose_and_choose(rows, y, tau, prior: FieldPrior, options: InversionOpt
         if rank >= _LAST_RANK:
             raise NumericalError(
                 f"the heights determine more than {rank} numbers, and the prior has {prior.n_modes} modes on this"
-                f" grid. Choose longer ranges or a coarser grid (up to {DENSE_LIMIT} modes are solved whole) or damp more."
+                f" grid. Damp more, or choose longer ranges or a coarser grid (up to {DENSE_LIMIT} modes are solved whole)."
             )
         rank *= 2
 

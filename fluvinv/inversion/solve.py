@@ -19,7 +19,8 @@ from fluvinv.inversion.prior import FieldPrior
 #: Above this many modes of the prior only the best determined directions are computed, by Lanczos iteration.
 DENSE_LIMIT = 6000
 
-_ROWS_AT_ONCE = 1000
+#: Entries of the dense products of rows and modes that are held at once.
+_ENTRIES_AT_ONCE = 20_000_000
 
 
 @dataclass(frozen=True, slots=True)
@@ -160,8 +161,9 @@ def decompose(
 
 def _chunks(rows: sparse.csr_array):
     """Slices of the rows, small enough for their dense products with the modes."""
-    for first in range(0, rows.shape[0], _ROWS_AT_ONCE):
-        yield slice(first, min(first + _ROWS_AT_ONCE, rows.shape[0]))
+    step = max(16, _ENTRIES_AT_ONCE // rows.shape[1])
+    for first in range(0, rows.shape[0], step):
+        yield slice(first, min(first + step, rows.shape[0]))
 
 
 def _all_directions(G, background_row, tau_squared, prior):

@@ -2,7 +2,8 @@
 
 Run on demand: ``python tests/benchmarks/solver.py``. One invented island; the map grid gets finer, and so does the
 prior. The yardstick is `scipy.linalg.eigh` (driver evd) on a random symmetric matrix with one row per mode of the
-prior: a dense solution that needs all directions cannot be cheaper.
+prior: a dense solution that needs all directions cannot be cheaper. On a machine that is busy with other work set
+OPENBLAS_NUM_THREADS=1: threads of the linear algebra that wait for each other can cost tenfold.
 """
 
 import time
