@@ -8,6 +8,7 @@ from pathlib import Path
 
 import numpy as np
 import pyproj
+from matplotlib.figure import Figure
 
 from fluvinv import __version__
 from fluvinv.files import publish, rasters, record, tables, vectors
@@ -150,8 +151,7 @@ def network(
             tables.write_profiles(
                 staging / "profiles.csv", tables.profiles_table(rivers.network, rivers.chi, rivers.tau)
             )
-            _draw(staging, {"network_map": river_figures.network_map(rivers.network),
-                            "profiles": river_figures.long_profiles(rivers.network)} | _chi_figure(rivers))  # fmt: skip
+            _draw(staging, _river_figures(rivers))
             job.step("", 1.0)
             written = _record(job, "network", rivers)
             record.write_record(staging / publish.RECORD_NAME, written)
@@ -171,12 +171,16 @@ def run(
             layout = lay_out(job.settings, rivers.network, rivers.tau, job.grid)
             job.warnings += layout.warnings
             shares = {"rows": 0.1, "decomposition": 0.2, "damping": 0.6, "errors": 0.65}
-            with drawing.styled():
-                result = invert(
-                    rivers.network, rivers.tau, layout.grid, layout.options, lambda name: job.step(name, shares[name])
+            result = invert(
+                rivers.network, rivers.tau, layout.grid, layout.options, lambda name: job.step(name, shares[name])
+            )
+            if result.curve is not None and not result.curve.clear:
+                job.warnings.append(
+                    "inversion.damping: the L-curve has no clear corner, so the damping is a guess; state range and"
+                    " spread with choose: fixed."
                 )
-                job.step("figures", 0.8)
-                lines = _publish_run(staging, job, rivers, layout, result)
+            job.step("figures", 0.8)
+            lines = _publish_run(staging, job, rivers, layout, result)
         return Outcome(folder, [*lines, *summary.entry("Results", [str(folder)])], job.warnings)
 
 
@@ -268,30 +272,35 @@ def _write_stacks(staging: Path, result: Inversion, crs: pyproj.CRS) -> None:
     rasters.write_stack(staging / "resolved.tif", flags, grid, crs, "resolved (1) or not (0)", "", dtype="uint8")
 
 
-def _chi_figure(rivers: Rivers) -> dict:
-    return {"height_against_chi": river_figures.height_against_chi(rivers.network, rivers.chi)}
+def _river_figures(rivers: Rivers, fitted: np.ndarray | None = None) -> dict[str, Callable[[], Figure]]:
+    """Figures that need no inversion, by name; each is drawn when it is called."""
+    return {
+        "network_map": lambda: river_figures.network_map(rivers.network),
+        "profiles": lambda: river_figures.long_profiles(rivers.network, fitted),
+        "height_against_chi": lambda: river_figures.height_against_chi(rivers.network, rivers.chi),
+    }
 
 
 def _draw_run(
     staging: Path, rivers: Rivers, result: Inversion, fitted: np.ndarray, comparison: Comparison | None
 ) -> None:
     net = rivers.network
-    drawn = {
-        "uplift_history": figures.uplift_history(result, net),
-        "histories_at_places": figures.histories(result, net, None if comparison is None else comparison.known),
-        "misfit_map": figures.misfit_map(net.height - fitted, net),
-        "network_map": river_figures.network_map(net),
-        "profiles": river_figures.long_profiles(net, fitted),
-        "height_against_travel_time": river_figures.height_against_travel_time(net, rivers.tau, fitted),
+    known = None if comparison is None else comparison.known
+    drawn = _river_figures(rivers, fitted) | {
+        "uplift_history": lambda: figures.uplift_history(result, net),
+        "histories_at_places": lambda: figures.histories(result, net, known),
+        "misfit_map": lambda: figures.misfit_map(net.height - fitted, net),
+        "height_against_travel_time": lambda: river_figures.height_against_travel_time(net, rivers.tau, fitted),
     }
     if result.curve is not None:
-        drawn["l_curve"] = figures.trade_off(result)
-    _draw(staging, drawn | _chi_figure(rivers))
+        drawn["l_curve"] = lambda: figures.trade_off(result)
+    _draw(staging, drawn)
 
 
-def _draw(staging: Path, drawn: dict) -> None:
+def _draw(staging: Path, drawn: dict[str, Callable[[], Figure]]) -> None:
+    """Draw and save figures in the house style."""
     folder = staging / "figures"
     folder.mkdir()
     with drawing.styled():
-        for name, figure in drawn.items():
-            drawing.save(figure, folder / f"{name}.png")
+        for name, draw in drawn.items():
+            drawing.save(draw(), folder / f"{name}.png")

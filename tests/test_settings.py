@@ -195,7 +195,7 @@ def test_numbers_of_yaml_1_2(load, word, value):
         ("inversion: {allow_subsidence: no}", "found 'no', expected true or false."),
         ("inversion: {seed: 1.5}", "found 1.5, expected a whole number from 0 to 4294967295."),
         ("inversion: {seed: -1}", "found -1, expected a whole number"),
-        ("inversion: {noise: {height_m: 0}}", "inversion.noise.height_m: found 0, expected a number from 0.001 to 10000 (m)."),
+        ("inversion: {noise: {height_m: 0}}", "noise.height_m: found 0, expected a number from 0.001 to 10000 (m)."),
         ("inversion: {noise: {}}", "inversion.noise: found no height_m, expected 'white' or a mapping such as"),
         ("inversion: {noise: grey}", "inversion.noise: found 'grey', expected 'white' or a mapping such as"),
         ("inversion: {noise: {heigth_m: 3}}", "unknown key; did you mean inversion.noise.height_m?"),

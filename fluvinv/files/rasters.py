@@ -198,6 +198,9 @@ def write_stack(
                     target.set_band_description(band, f"{quantity} at {age:.6g} Ma{suffix}")
                     target.set_band_unit(band, unit)
             with memory.open() as source:
-                rasterio.shutil.copy(source, path, driver="COG", compress="DEFLATE", blocksize=256, overviews="NONE")
+                means = "MODE" if dtype == "uint8" else "AVERAGE"
+                rasterio.shutil.copy(
+                    source, path, driver="COG", compress="DEFLATE", blocksize=256, overview_resampling=means
+                )
     except RasterioError as error:
         raise OutputError(f"{path}: cannot be written: {error}.") from error

@@ -5,6 +5,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from scipy import sparse
+from threadpoolctl import threadpool_limits
 
 from fluvinv.errors import NumericalError
 from fluvinv.inversion.choose import Damping, LCurve, damping_at_corner, fixed_damping, l_curve
@@ -18,6 +19,10 @@ from fluvinv.network import RiverNetwork
 
 #: Half width of a 95 % interval in standard deviations.
 Z95 = 1.959963984540054
+
+#: Below so many unknowns linear algebra gains little from threads, and on a busy machine threads that wait for each
+#: other cost up to 30 times the time.
+_ONE_THREAD_BELOW = 12_000
 
 #: Rates that must not be negative are solved for, without modes, up to this many unknowns.
 MOST_NON_NEGATIVE = 8000
@@ -152,6 +157,11 @@ def invert(
     Linear, for slope exponent n = 1, stationary drainage and uniform, constant erodibility. Heights alone
     do not give the erodibility: u_K(x, t) = a u(x, a t) with a = K/K0 fits as well.
     """
+    with threadpool_limits(1 if grid.n_unknowns < _ONE_THREAD_BELOW else None, user_api="blas"):
+        return _invert(network, tau, grid, options, progress)
+
+
+def _invert(network, tau, grid, options, progress) -> Inversion:
     progress("rows")
     G = sensitivity(network, tau, grid)
     used = np.flatnonzero(tau > 0)
@@ -207,7 +217,7 @@ def _decompose_and_choose(rows, y, tau, prior: FieldPrior, options: InversionOpt
         if rank >= _LAST_RANK:
             raise NumericalError(
                 f"the heights determine more than {rank} numbers, and the prior has {prior.n_modes} modes on this"
-                f" grid. Damp more, or choose longer ranges or a coarser grid (up to {DENSE_LIMIT} modes are solved whole)."
+                f" grid. Damp more, or choose longer ranges or a coarser grid (with {DENSE_LIMIT} modes or fewer)."
             )
         rank *= 2
 
