@@ -7,7 +7,7 @@ from fluvinv.files import publish, rasters
 from fluvinv.files.first_settings import first_settings_text
 from fluvinv.files.settings_keys import naming_keys
 from fluvinv.guesses import first_guesses
-from fluvinv.inversion import make_prior, predict_cost
+from fluvinv.inversion import make_prior, nest, predict_cost
 from fluvinv.layout import lay_out
 from fluvinv.pipeline import Outcome, Progress, draw_rivers, open_job, refuse_target, rivers_lines, target_folder
 from fluvinv.report import summary
@@ -51,8 +51,9 @@ def check(settings_path: Path, output: Path | None, overwrite: bool, progress: P
         layout = lay_out(job.settings, rivers.network, rivers.tau, job.grid)
         job.step("", 1.0)
         grid, options = layout.grid, layout.options
-        n_modes = make_prior(grid, options.range_space, options.range_time).n_modes
-        cost = predict_cost(rivers.tau, rivers.network.distance, grid, n_modes)
+        solved = nest(grid).fine
+        n_modes = make_prior(solved, options.range_space, options.range_time).n_modes
+        cost = predict_cost(rivers.tau, rivers.network.distance, solved, n_modes)
         n_rows, n_cols = job.grid.height.shape
         memory = (cost.memory + 60.0 * n_rows * n_cols) / 2**30
         seconds = cost.seconds + job.timings.get("drainage", 0.0) + 8.0
@@ -63,7 +64,8 @@ def check(settings_path: Path, output: Path | None, overwrite: bool, progress: P
                 [
                     f"{grid.n_unknowns:,}: {grid.n_places:,} map nodes {m_to_km(grid.spacing):g} km apart times"
                     f" {grid.n_ages} ages {yr_to_myr(grid.ages[1]):g} Myr apart, to {yr_to_myr(grid.ages[-1]):.3g} Ma;"
-                    f" {cost.method} solver."
+                    f" solved on a grid of {solved.n_unknowns:,} by {n_modes:,} modes of the prior; {cost.method}"
+                    " solver."
                 ],
             ),
             *summary.entry(

@@ -213,12 +213,8 @@ def test_sampled_adds_up_to_all_travel_times(results):
 def test_interval_is_rate_and_standard_deviation(results):
     rate, sd = results.maps("uplift_rate"), results.maps("uplift_rate_sd")
     assert np.nanmin(sd) > 0
-    np.testing.assert_allclose(
-        results.maps("uplift_rate_p025"), rate - 1.96 * sd, rtol=0, atol=1e-4 * np.nanmax(sd)
-    )
-    np.testing.assert_allclose(
-        results.maps("uplift_rate_p975"), rate + 1.96 * sd, rtol=0, atol=1e-4 * np.nanmax(sd)
-    )
+    np.testing.assert_allclose(results.maps("uplift_rate_p025"), rate - 1.96 * sd, rtol=0, atol=1e-4 * np.nanmax(sd))
+    np.testing.assert_allclose(results.maps("uplift_rate_p975"), rate + 1.96 * sd, rtol=0, atol=1e-4 * np.nanmax(sd))
 
 
 def test_cumulative_uplift_is_the_integral_of_the_rates(results):
@@ -233,9 +229,7 @@ def test_cumulative_uplift_is_the_integral_of_the_rates(results):
     assert np.nanmax(sd[0]) == 0.0
     rate_sd = results.maps("uplift_rate_sd").astype(float)
     most = 500.0 * STEP_MYR * np.cumsum(rate_sd[1:] + rate_sd[:-1], axis=0)
-    assert np.all(
-        (sd[1:] > 0) & (sd[1:] <= most * (1 + 1e-5)) | np.isnan(most)
-    )  # sd is a norm: triangle inequality
+    assert np.all((sd[1:] > 0) & (sd[1:] <= most * (1 + 1e-5)) | np.isnan(most))  # sd is a norm: triangle inequality
 
 
 def test_profiles_table(results):

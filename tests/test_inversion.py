@@ -2,18 +2,27 @@
 
 import numpy as np
 import pytest
+from scipy import sparse
 from trees import random_network
 
 from fluvinv.errors import NumericalError
 from fluvinv.inversion import InversionOptions, age_nodes, invert, make_grid, sensitivity
 from fluvinv.inversion import invert as invert_function
 from fluvinv.inversion.choose import Damping, fixed_damping, l_curve
+from fluvinv.inversion.nesting import Nested, nest
 from fluvinv.inversion.posterior import cumulative_mix, kernel_share, standard_deviation
 from fluvinv.inversion.prior import make_prior, matern_correlation
 from fluvinv.inversion.solve import decompose
 from fluvinv.streampower import travel_time
 
 HEIGHT, SPREAD = 3.0, 1e-4
+
+
+def not_nested(grid):
+    """A grid that is solved on as it is."""
+    return Nested(
+        grid, np.arange(grid.n_places), np.arange(grid.n_ages), sparse.eye_array(grid.n_unknowns, format="csr")
+    )
 
 
 class Problem:
@@ -92,18 +101,22 @@ def test_cumulative_uplift_is_the_integral_of_the_rate(problem):
     assert (cumulative_mix(ages) @ rates)[-1] == pytest.approx(total, rel=1e-6)
 
 
-def test_kernel_share_equals_dense_algebra(problem):
-    grid = problem.grid
+def neighbours(grid):
+    """(n_unknowns, n_unknowns) bool: within one map node and one age node."""
     rows, cols = np.nonzero(grid.place >= 0)
     age, place = np.divmod(np.arange(grid.n_unknowns), grid.n_places)
-    squares = problem.kernel**2
-    near = (
+    return (
         (np.abs(rows[place][:, None] - rows[place]) <= 1)
         & (np.abs(cols[place][:, None] - cols[place]) <= 1)
         & (np.abs(age[:, None] - age) <= 1)
     )
-    expected = (squares * near).sum(axis=1) / squares.sum(axis=1)
-    ours = kernel_share(problem.G, problem.spectrum, problem.damping, grid).ravel()
+
+
+def test_kernel_share_equals_dense_algebra(problem):
+    grid = problem.grid
+    squares = problem.kernel**2
+    expected = (squares * neighbours(grid)).sum(axis=1) / squares.sum(axis=1)
+    ours = kernel_share(problem.G, problem.spectrum, problem.damping, grid, not_nested(grid)).ravel()
     np.testing.assert_allclose(ours, expected, atol=1e-4)  # filter factors below 1e-4 are left out
 
 
@@ -212,6 +225,37 @@ def test_rates_held_non_negative():
 def test_no_heights_no_inversion(problem):
     with pytest.raises(NumericalError, match="nothing to invert"):
         decompose(problem.G, problem.y, np.zeros_like(problem.tau), problem.prior)
+
+
+def test_nested_grids_describe_the_same_fields(problem):
+    """Interpolating to the finer grid changes no height, and picking the published nodes undoes it."""
+    nested = nest(problem.grid)
+    assert nested.fine.spacing == problem.grid.spacing / 2
+    fine = sensitivity(problem.network, problem.tau, nested.fine)
+    difference = fine @ nested.spread - problem.G
+    assert np.abs(difference).max() < 1e-9 * problem.tau.max()
+    values = np.random.default_rng(0).standard_normal(problem.grid.n_unknowns)
+    np.testing.assert_array_equal(nested.pick(nested.spread @ values).ravel(), values)
+    x, y = nested.fine.place_xy[nested.places].T
+    np.testing.assert_array_equal(np.column_stack([x, y]), problem.grid.place_xy)
+
+
+def test_kernel_share_on_nested_grids_equals_dense_algebra(problem):
+    """Solved on the finer grid, averaged over the published one: A = pick d u_hat / d u_true spread."""
+    grid, nested = problem.grid, nest(problem.grid)
+    G = sensitivity(problem.network, problem.tau, nested.fine)
+    prior = make_prior(nested.fine, 3e4, 1.5e6)
+    spectrum = decompose(G, problem.y, problem.tau, prior)
+    root = prior.root(np.eye(prior.n_modes))
+    columns = np.column_stack([G @ root, problem.tau])
+    precision = np.diag(np.r_[np.full(prior.n_modes, SPREAD**-2), 0.0])
+    posterior = np.linalg.inv(columns.T @ columns / HEIGHT**2 + precision)
+    to_rate = np.column_stack([root, np.ones(nested.fine.n_unknowns)])
+    kernel = to_rate @ posterior @ columns.T @ (G @ nested.spread).toarray() / HEIGHT**2
+    cube = kernel.reshape(nested.fine.n_ages, nested.fine.n_places, -1)[nested.ages][:, nested.places]
+    squares = cube.reshape(grid.n_unknowns, -1) ** 2
+    ours = kernel_share(G, spectrum, problem.damping, grid, nested).ravel()
+    np.testing.assert_allclose(ours, (squares * neighbours(grid)).sum(axis=1) / squares.sum(axis=1), atol=1e-3)
 
 
 def test_halving_spacing_and_step_keeps_the_answer():

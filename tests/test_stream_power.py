@@ -60,9 +60,7 @@ def test_slope_and_area_of_the_network_give_the_concavity():
     assert np.exp(factor) == pytest.approx(UPLIFT / 2e-5, rel=1e-9)
 
 
-@pytest.mark.parametrize(
-    ("x", "height"), [(9e4, 2.6989529), (5e4, 16.9244318), (1e4, 49.5007171), (1e3, 83.3548340)]
-)
+@pytest.mark.parametrize(("x", "height"), [(9e4, 2.6989529), (5e4, 16.9244318), (1e4, 49.5007171), (1e3, 83.3548340)])
 def test_steady_profile_under_hack(x, height):
     """Heights of set H (check value 1.2; Whipple & Tucker 1999, from memory, numbers recomputed)."""
     assert SET_H.steady_height(x, UPLIFT) == pytest.approx(height, rel=1e-8)
@@ -71,9 +69,7 @@ def test_steady_profile_under_hack(x, height):
 def test_steady_profile_converges_with_the_edges():
     """U tau of the network tends to the closed form, in first order of the edge (check value 1.2)."""
     exact = SET_H.steady_height(1e3, UPLIFT)
-    errors = np.array(
-        [UPLIFT * travel_time(hack_chain(n)[0], 2e-5, 0.5)[-1] - exact for n in (500, 1000, 2000, 4000)]
-    )
+    errors = np.array([UPLIFT * travel_time(hack_chain(n)[0], 2e-5, 0.5)[-1] - exact for n in (500, 1000, 2000, 4000)])
     assert np.all(errors > 0)  # the upstream node's area is the smallest of the edge
     np.testing.assert_allclose(order_of_convergence(errors), 1.0, atol=0.1)
     assert errors[-1] < 0.005 * exact

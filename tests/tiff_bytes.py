@@ -46,10 +46,7 @@ class Tiff:
 
     def entries(self, directory: int) -> list[tuple[int, int, int, tuple]]:
         """Tag, type, count and values of each entry."""
-        return [
-            (tag, kind, count, self.unpack(layout, at))
-            for tag, kind, count, layout, at in self._fields(directory)
-        ]
+        return [(tag, kind, count, self.unpack(layout, at)) for tag, kind, count, layout, at in self._fields(directory)]
 
     def end_of_directory(self, directory: int) -> int:
         """Offset of the first byte after a directory and all values that its entries point to."""

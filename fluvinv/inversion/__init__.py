@@ -3,6 +3,7 @@
 from fluvinv.inversion.compare import Comparison, compare, history_at_nodes
 from fluvinv.inversion.cost import Cost, predict_cost
 from fluvinv.inversion.invert import Inversion, InversionOptions, invert
+from fluvinv.inversion.nesting import nest
 from fluvinv.inversion.prior import make_prior
 from fluvinv.inversion.sensitivity import sensitivity
 from fluvinv.inversion.solve import DENSE_LIMIT
@@ -30,6 +31,7 @@ __all__ = [
     "invert",
     "make_grid",
     "make_prior",
+    "nest",
     "nice_number",
     "predict_cost",
     "sensitivity",

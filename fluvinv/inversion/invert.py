@@ -9,6 +9,7 @@ from threadpoolctl import threadpool_limits
 
 from fluvinv.errors import NumericalError
 from fluvinv.inversion.choose import Damping, LCurve, damping_at_corner, fixed_damping, l_curve
+from fluvinv.inversion.nesting import nest
 from fluvinv.inversion.nonnegative import nonnegative_rates, truncated_interval
 from fluvinv.inversion.posterior import RESOLVED_SHARE, cumulative_mix, kernel_share, standard_deviation
 from fluvinv.inversion.prior import FieldPrior, make_prior
@@ -154,8 +155,10 @@ def invert(
 
     Notes
     -----
-    Linear, for slope exponent n = 1, stationary drainage and uniform, constant erodibility. Heights alone
-    do not give the erodibility: u_K(x, t) = a u(x, a t) with a = K/K0 fits as well.
+    Solved on a grid twice as fine as the published one where that is affordable (see `nesting`); `fitted` are
+    the heights that the published rates leave. Linear, for slope exponent n = 1, stationary drainage and
+    uniform, constant erodibility. Heights alone do not give the erodibility: u_K(x, t) = a u(x, a t) with
+    a = K/K0 fits as well.
     """
     with threadpool_limits(1 if grid.n_unknowns < _ONE_THREAD_BELOW else None, user_api="blas"):
         return _invert(network, tau, grid, options, progress)
@@ -163,26 +166,28 @@ def invert(
 
 def _invert(network, tau, grid, options, progress) -> Inversion:
     progress("rows")
-    G = sensitivity(network, tau, grid)
+    nested = nest(grid)
+    G = sensitivity(network, tau, nested.fine)
     used = np.flatnonzero(tau > 0)
     rows, y = G[used], network.relative_height[used]
     progress("decomposition")
-    prior = make_prior(grid, options.range_space, options.range_time)
+    prior = make_prior(nested.fine, options.range_space, options.range_time)
     spectrum, damping, curve = _decompose_and_choose(rows, y, tau[used], prior, options, progress)
     progress("errors")
     estimate, background = spectrum.solution(damping.weight)
-    sd = standard_deviation(spectrum, damping, grid, np.eye(grid.n_ages))
-    mean = estimate.reshape(sd.shape)
+    at_ages = np.eye(nested.fine.n_ages)[nested.ages]
+    sd = standard_deviation(spectrum, damping, nested.fine, at_ages)[:, nested.places]
+    mean = nested.pick(estimate)
     if options.allow_subsidence:
         rate, low, high = mean, mean - Z95 * sd, mean + Z95 * sd
     else:
-        rate = _nonnegative(rows, y, prior, damping, grid).reshape(sd.shape)
+        rate = _nonnegative(rows @ nested.spread, y, grid, options, damping).reshape(sd.shape)
         low, high = truncated_interval(rate, mean, sd)
     if not np.all(np.isfinite(rate)):
         raise NumericalError("the inversion gave rates that are not finite; the damping is too weak for this grid")
     mix = cumulative_mix(grid.ages)
-    fitted = G @ rate.ravel()
-    freedom = used.size - spectrum.effective_parameters(damping.weight)
+    fitted = G @ (nested.spread @ rate.ravel())
+    n_free = spectrum.effective_parameters(damping.weight)
     return Inversion(
         grid=grid,
         rate=rate,
@@ -190,16 +195,16 @@ def _invert(network, tau, grid, options, progress) -> Inversion:
         low=low,
         high=high,
         cumulative=mix @ rate,
-        cumulative_sd=standard_deviation(spectrum, damping, grid, mix),
-        sampled=np.asarray(G.sum(axis=0)).reshape(sd.shape),
-        share=kernel_share(rows, spectrum, damping, grid),
+        cumulative_sd=standard_deviation(spectrum, damping, nested.fine, mix @ at_ages)[:, nested.places],
+        sampled=(nested.spread.T @ G.sum(axis=0)).reshape(sd.shape),
+        share=kernel_share(rows, spectrum, damping, grid, nested),
         fitted=fitted,
         background=background,
         damping=damping,
         curve=curve,
         method=spectrum.method,
-        effective_parameters=spectrum.effective_parameters(damping.weight),
-        reduced_chi_square=float(np.sum((y - fitted[used]) ** 2) / (damping.height_sd**2 * freedom)),
+        effective_parameters=n_free,
+        reduced_chi_square=float(np.sum((y - fitted[used]) ** 2) / (damping.height_sd**2 * (used.size - n_free))),
         log_evidence=spectrum.log_evidence(damping.weight, damping.height_sd),
         n_rows=used.size,
     )
@@ -229,10 +234,12 @@ def _choose(spectrum: Spectrum, options: InversionOptions) -> tuple[Damping, LCu
     return damping_at_corner(spectrum, curve, options.height_sd), curve
 
 
-def _nonnegative(rows: sparse.csr_array, y, prior, damping, grid) -> np.ndarray:
+def _nonnegative(rows: sparse.csr_array, y, grid: UpliftGrid, options: InversionOptions, damping) -> np.ndarray:
+    """Non-negative rates, on the published grid."""
     if grid.n_unknowns > MOST_NON_NEGATIVE:
         raise NumericalError(
             f"rates that must not be negative are solved for up to {MOST_NON_NEGATIVE} unknowns, and this grid has"
             f" {grid.n_unknowns}. Choose a coarser uplift grid, or allow subsidence."
         )
+    prior = make_prior(grid, options.range_space, options.range_time)
     return nonnegative_rates(rows, y, prior, damping.weight)

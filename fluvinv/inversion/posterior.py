@@ -4,6 +4,7 @@ import numpy as np
 from scipy import sparse
 
 from fluvinv.inversion.choose import Damping
+from fluvinv.inversion.nesting import Nested
 from fluvinv.inversion.solve import Spectrum
 from fluvinv.inversion.uplift_grid import UpliftGrid
 
@@ -61,7 +62,9 @@ def cumulative_mix(ages: np.ndarray) -> np.ndarray:
     return mix
 
 
-def kernel_share(rows: sparse.csr_array, spectrum: Spectrum, damping: Damping, grid: UpliftGrid) -> np.ndarray:
+def kernel_share(
+    rows: sparse.csr_array, spectrum: Spectrum, damping: Damping, grid: UpliftGrid, nested: Nested
+) -> np.ndarray:
     """Share of the squared averaging kernel that lies within one map node and one age node.
 
     The averaging kernel of a node is its row of A = d u_hat / d u_true, background included: every estimate
@@ -71,9 +74,13 @@ def kernel_share(rows: sparse.csr_array, spectrum: Spectrum, damping: Damping, g
 
     Parameters
     ----------
-    rows : (n_rows, n_unknowns) csr array, yr
+    rows : (n_rows, n_unknowns_fine) csr array, yr
         The rows that were decomposed.
-    spectrum, damping, grid
+    spectrum, damping
+    grid : UpliftGrid
+        The published grid, whose nodes are meant.
+    nested : Nested
+        The published grid inside the one that was solved on.
 
     Returns
     -------
@@ -84,12 +91,14 @@ def kernel_share(rows: sparse.csr_array, spectrum: Spectrum, damping: Damping, g
     used = spectrum.filter(damping.weight) > 1e-4
     basis = spectrum.prior.root(spectrum.vectors[:, used])
     carried = g @ basis
-    left = np.empty((basis.shape[0], basis.shape[1] + 1))
-    left[:, :-1] = (basis - carried) / (spectrum.values[used] + damping.weight**2)
+    right = np.empty((grid.n_unknowns, basis.shape[1] + 1))
+    seen = rows @ basis
+    right[:, :-1] = nested.spread.T @ (rows.T @ seen - spectrum.tau_squared * np.outer(g, carried))
+    right[:, -1] = nested.spread.T @ g
+    published = basis.reshape(nested.fine.n_ages, nested.fine.n_places, -1)[nested.ages][:, nested.places]
+    left = np.empty_like(right)
+    left[:, :-1] = (published.reshape(grid.n_unknowns, -1) - carried) / (spectrum.values[used] + damping.weight**2)
     left[:, -1] = 1.0
-    right = np.empty_like(left)
-    right[:, :-1] = rows.T @ (rows @ basis) - spectrum.tau_squared * np.outer(g, carried)
-    right[:, -1] = g
     whole = np.sum((left @ (right.T @ right)) * left, axis=1)
     near = _near_squares(left, right, grid)
     share = np.divide(near, whole, out=np.zeros_like(near), where=whole > 0)

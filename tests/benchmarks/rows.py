@@ -63,9 +63,7 @@ def island(n_cells: int) -> RiverNetwork:
 
 
 @njit(cache=True)
-def walk_rows(
-    nodes, receiver, u, v, tau, base_u, base_v, step, n_ages, place, n_places, indptr, indices, data
-):
+def walk_rows(nodes, receiver, u, v, tau, base_u, base_v, step, n_ages, place, n_places, indptr, indices, data):
     """Rows by walking every edge of every path; row sums are right, the share of each unknown is approximate."""
     row = np.zeros(n_places * n_ages)
     touched = np.empty(row.size, dtype=np.int32)
@@ -182,9 +180,7 @@ def measure(n_cells: int, ages: np.ndarray | None) -> tuple[Line, np.ndarray]:
     np.testing.assert_allclose(plain.sum(axis=1), tau[nodes], rtol=1e-9)  # it does the same work
     per_node = seconds / network.n_nodes
     dense = depth.sum() / crossings(network, tau, grid).sum()
-    return Line(
-        network.n_nodes, per_node, G.nnz / network.n_nodes, dense, walked / nodes.size / per_node
-    ), ages
+    return Line(network.n_nodes, per_node, G.nnz / network.n_nodes, dense, walked / nodes.size / per_node), ages
 
 
 def main() -> None:
@@ -204,9 +200,7 @@ def main() -> None:
     slope = np.polyfit(np.log(n_nodes), np.log(seconds), 1)[0]
     dense = [line.ratio for line in lines if line.nodes_per_crossing >= DENSE_PATH]
     print(f"log-log slope {slope:.3f} (at most {MOST_SLOPE})")
-    print(
-        f"least ratio at {DENSE_PATH:g} nodes per crossing or more: {min(dense, default=np.nan):.1f} (at least 10)"
-    )
+    print(f"least ratio at {DENSE_PATH:g} nodes per crossing or more: {min(dense, default=np.nan):.1f} (at least 10)")
     if not (slope <= MOST_SLOPE and dense and min(dense) >= LEAST_RATIO):
         raise SystemExit("the rows cost more than they may")
 

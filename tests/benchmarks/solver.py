@@ -49,9 +49,7 @@ def main() -> None:
     rng = np.random.default_rng(2)
     heights = 2e-4 * tau * (1 + 0.2 * np.sin(network.map_x / 4e4)) + rng.normal(0, 10, tau.size)
     network = type(network)(**{key: getattr(network, key) for key in network.__slots__} | {"height": heights})
-    print(
-        "unknowns  modes  solver     rows  decomposition  damping  errors  eigh  (decomposition + errors) / eigh"
-    )
+    print("unknowns  modes  solver     rows  decomposition  damping  errors  eigh  (decomposition + errors) / eigh")
     for spacing, n_steps, share in SIZES:
         grid = make_grid(network, spacing * 1e3, age_nodes(tau.max() / n_steps, tau.max()))
         width = np.sqrt(float(network.area[network.outlet].sum()))
@@ -60,9 +58,7 @@ def main() -> None:
         seconds = timed_inversion(network, tau, grid, options)
         yardstick = eigh_seconds(modes)
         work = seconds["decomposition"] + seconds["errors"]
-        steps = " ".join(
-            f"{name} {seconds[name]:.2f} s," for name in ("rows", "decomposition", "damping", "errors")
-        )
+        steps = " ".join(f"{name} {seconds[name]:.2f} s," for name in ("rows", "decomposition", "damping", "errors"))
         print(
             f"{grid.n_unknowns:8,} {modes:6,}  {steps} eigh {yardstick:.2f} s, ratio {work / yardstick:.1f}",
             flush=True,
