@@ -174,14 +174,28 @@ def run(
             result = invert(
                 rivers.network, rivers.tau, layout.grid, layout.options, lambda name: job.step(name, shares[name])
             )
-            if result.curve is not None and not result.curve.clear:
-                job.warnings.append(
-                    "inversion.damping: the L-curve has no clear corner, so the damping is a guess; state range and"
-                    " spread with choose: fixed."
-                )
+            job.warnings += _doubts(result)
             job.step("figures", 0.8)
             lines = _publish_run(staging, job, rivers, layout, result)
         return Outcome(folder, [*lines, *summary.entry("Results", [str(folder)])], job.warnings)
+
+
+def _doubts(result: Inversion) -> list[str]:
+    """What in the inversion itself the reader must know."""
+    found = []
+    if result.curve is not None and not result.curve.clear:
+        found.append(
+            "inversion.damping: the L-curve has no clear corner, so the damping is a guess; state range and spread with"
+            " choose: fixed."
+        )
+    lost = float(np.sqrt(np.mean((result.fitted - result.fitted_by_stack) ** 2)))
+    if lost > 0.5 * result.damping.height_sd:
+        found.append(
+            f"uplift_grid: the history that was fitted varies more between map nodes and ages than the published stack"
+            f" can carry; heights made from the stack differ from the fit by {lost:.3g} m rms. Choose a smaller spacing"
+            " and step, or more damping."
+        )
+    return found
 
 
 def _publish_run(staging: Path, job: Job, rivers: Rivers, layout: Layout, result: Inversion) -> list[str]:

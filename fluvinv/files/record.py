@@ -84,6 +84,7 @@ def inversion_parts(result: Inversion, residual: np.ndarray, choose: str, ranges
         },
         "fit": {
             "rms_m": float(np.sqrt(np.mean(residual**2))),
+            "stack_rms_m": float(np.sqrt(np.mean((residual + result.fitted - result.fitted_by_stack) ** 2))),
             "held_out_rms_m": None,
             "reduced_chi_square": result.reduced_chi_square,
             "n_heights": result.n_rows,

@@ -77,6 +77,8 @@ class Inversion:
         Squared share of the averaging kernel within one map node and one age node.
     fitted : (n_nodes,) float array, m
         Fitted height above base level.
+    fitted_by_stack : (n_nodes,) float array, m
+        Heights that the published rates leave when they are interpolated between map nodes and ages.
     background : float, m/yr
         The free background rate (of the fit without a bound on the rates).
     damping : Damping
@@ -98,6 +100,7 @@ class Inversion:
     sampled: np.ndarray
     share: np.ndarray
     fitted: np.ndarray
+    fitted_by_stack: np.ndarray
     background: float
     damping: Damping
     curve: LCurve | None
@@ -155,8 +158,8 @@ def invert(
 
     Notes
     -----
-    Solved on a grid twice as fine as the published one where that is affordable (see `nesting`); `fitted` are
-    the heights that the published rates leave. Linear, for slope exponent n = 1, stationary drainage and
+    Solved on a grid twice as fine as the published one where that is affordable (see `nesting`); what is
+    published are the rates at the nodes of the coarser one. Linear, for slope exponent n = 1, stationary drainage and
     uniform, constant erodibility. Heights alone do not give the erodibility: u_K(x, t) = a u(x, a t) with
     a = K/K0 fits as well.
     """
@@ -180,13 +183,14 @@ def _invert(network, tau, grid, options, progress) -> Inversion:
     mean = nested.pick(estimate)
     if options.allow_subsidence:
         rate, low, high = mean, mean - Z95 * sd, mean + Z95 * sd
+        fitted = G @ estimate
     else:
         rate = _nonnegative(rows @ nested.spread, y, grid, options, damping).reshape(sd.shape)
         low, high = truncated_interval(rate, mean, sd)
+        fitted = G @ (nested.spread @ rate.ravel())
     if not np.all(np.isfinite(rate)):
         raise NumericalError("the inversion gave rates that are not finite; the damping is too weak for this grid")
     mix = cumulative_mix(grid.ages)
-    fitted = G @ (nested.spread @ rate.ravel())
     n_free = spectrum.effective_parameters(damping.weight)
     return Inversion(
         grid=grid,
@@ -199,6 +203,7 @@ def _invert(network, tau, grid, options, progress) -> Inversion:
         sampled=(nested.spread.T @ G.sum(axis=0)).reshape(sd.shape),
         share=kernel_share(rows, spectrum, damping, grid, nested),
         fitted=fitted,
+        fitted_by_stack=G @ (nested.spread @ rate.ravel()),
         background=background,
         damping=damping,
         curve=curve,
