@@ -286,10 +286,12 @@ def to_map(crs: CRS, map_crs: CRS, x: np.ndarray, y: np.ndarray) -> tuple[np.nda
     """
     if crs == map_crs:
         return np.array(x, dtype=np.float64), np.array(y, dtype=np.float64)
-    map_x, map_y = Transformer.from_crs(crs, map_crs, always_xy=True).transform(x, y)
+    # as lists: pyproj takes an array of one point for a number, which numpy before 2.4 deprecates
+    there = Transformer.from_crs(crs, map_crs, always_xy=True).transform(np.asarray(x).tolist(), np.asarray(y).tolist())
+    map_x, map_y = (np.asarray(values) for values in there)
     if not (np.isfinite(map_x).all() and np.isfinite(map_y).all()):
         raise SettingsError(
             f"catchment.projection: the DEM's rivers do not lie within the domain of '{map_crs.name}'. "
             "Write 'auto' or a CRS that covers the DEM."
         )
-    return np.asarray(map_x), np.asarray(map_y)
+    return map_x, map_y
