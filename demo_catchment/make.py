@@ -9,8 +9,8 @@ from affine import Affine
 from fluvinv.landscape import DEMO_NAME, demo_island
 
 FOLDER = Path(__file__).parent
-#: Any metric CRS would do: the island lies nowhere.
-CRS = "EPSG:32631"
+#: Any metric CRS would do: the island lies nowhere. These coordinates fall on open ocean.
+CRS = "EPSG:32710"
 
 
 def write(folder: Path = FOLDER) -> None:

@@ -31,8 +31,20 @@ VerboseOption = Annotated[bool, typer.Option("-v", "--verbose", help="Name every
 QuietOption = Annotated[bool, typer.Option("-q", "--quiet", help="No progress, no warnings, no summary: errors alone.")]
 
 
+def _show_version(wanted: bool) -> None:
+    if wanted:
+        from fluvinv import __version__
+
+        print(f"fluvinv {__version__}")
+        raise typer.Exit
+
+
 @app.callback()
-def _verbs() -> None:
+def _verbs(
+    _version: Annotated[
+        bool, typer.Option("--version", callback=_show_version, is_eager=True, help="Print the version and stop.")
+    ] = False,
+) -> None:
     """Histories of rock uplift, with their uncertainty, from the river profiles of a digital elevation model."""
 
 

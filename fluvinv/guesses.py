@@ -56,8 +56,8 @@ def first_guesses(grid: Grid, base_level: float = 0.0) -> dict[str, tuple[object
         "stream_power.area_exponent": (AREA_EXPONENT, "the middle of the usual 0.4 to 0.6"),
         "uplift_grid.spacing_km": (m_to_km(spacing), f"about 120 map nodes on {m2_to_km2(area):,.0f} km2 of land"),
         "uplift_grid.step_myr": (
-            yr_to_myr(suggest_step(longest)),
-            f"an eighth of the {yr_to_myr(longest):.3g} Myr that this erodibility gives the longest river",
+            yr_to_myr(suggest_step(longest, 12)),
+            f"a twelfth of the {yr_to_myr(longest):.3g} Myr that this erodibility gives the longest river",
         ),
     }
     if not sea.sea.any():

@@ -188,12 +188,17 @@ def _doubts(result: Inversion) -> list[str]:
             "inversion.damping: the L-curve has no clear corner, so the damping is a guess; state range and spread with"
             " choose: fixed."
         )
-    lost = float(np.sqrt(np.mean((result.fitted - result.fitted_by_stack) ** 2)))
+    lost = float(np.sqrt(np.mean((result.fitted - result.solved) ** 2)))
     if lost > 0.5 * result.damping.height_sd:
         found.append(
-            f"uplift_grid: the history that was fitted varies more between map nodes and ages than the published stack"
+            "uplift_grid: the history that was fitted varies more between map nodes and ages than the published stack"
             f" can carry; heights made from the stack differ from the fit by {lost:.3g} m rms. Choose a smaller spacing"
             " and step, or more damping."
+        )
+    if result.reduced_chi_square > 2 and lost <= 0.5 * result.damping.height_sd:
+        found.append(
+            f"inversion.noise: the stated height error of {result.damping.height_sd:.3g} m is too small for the misfit"
+            f" (reduced chi-square {result.reduced_chi_square:.3g}); the stated errors are too small with it."
         )
     return found
 
@@ -223,6 +228,7 @@ def _publish_run(staging: Path, job: Job, rivers: Rivers, layout: Layout, result
         *rivers_lines(job, rivers),
         *summary.inversion_lines(result, written["fit"]["rms_m"], choose, ranges),
         *summary.entry("Found", written["verdict"]),
+        *summary.entry("Errors", [summary.ON_INTERVALS[choose]]),
         *summary.entry("Cautions", list(CAUTIONS)),
         *(summary.comparison_line(comparison) if comparison is not None else []),
     ]

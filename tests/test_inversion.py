@@ -8,7 +8,7 @@ from trees import random_network
 from fluvinv.errors import NumericalError
 from fluvinv.inversion import InversionOptions, age_nodes, invert, make_grid, sensitivity
 from fluvinv.inversion import invert as invert_function
-from fluvinv.inversion.choose import Damping, fixed_damping, l_curve
+from fluvinv.inversion.choose import Damping, fixed_damping, implied_spread, l_curve
 from fluvinv.inversion.nesting import Nested, nest
 from fluvinv.inversion.posterior import cumulative_mix, kernel_share, standard_deviation
 from fluvinv.inversion.prior import make_prior, matern_correlation
@@ -42,7 +42,7 @@ class Problem:
         self.truth = 3e-4 + SPREAD * root @ rng.standard_normal(n)
         self.y = self.G @ self.truth + HEIGHT * rng.standard_normal(self.network.n_nodes)
         self.spectrum = decompose(self.G, self.y, self.tau, self.prior)
-        self.damping = Damping(HEIGHT / SPREAD, HEIGHT, SPREAD)
+        self.damping = Damping(HEIGHT / SPREAD, HEIGHT, SPREAD, SPREAD)
         columns = np.column_stack([self.G @ root, self.tau])
         precision = np.diag(np.r_[np.full(n, SPREAD**-2), 0.0])
         to_rate = np.column_stack([root, np.ones(n)])
@@ -82,6 +82,31 @@ def test_both_forms_of_the_posterior_agree(problem):
     ours = standard_deviation(problem.spectrum, problem.damping, problem.grid, np.eye(problem.grid.n_ages)).ravel()
     np.testing.assert_allclose(ours, np.sqrt(np.diag(data_space)), rtol=1e-3)
     assert np.all(np.diag(problem.covariance) <= np.diag(C))
+
+
+def test_errors_of_a_damped_estimate_equal_dense_algebra(problem):
+    """Damped too much for the field's spread: error = bias + noise, by dense algebra on the estimator's matrix.
+
+    u_hat = R y; the error covariance is (R G - 1) C (R G - 1)' + s^2 R R' with C the field's covariance (identity).
+    """
+    weight, wide = 12 * HEIGHT / SPREAD, 5 * SPREAD
+    n = problem.grid.n_unknowns
+    root = problem.prior.root(np.eye(n))
+    columns = np.column_stack([problem.G @ root, problem.tau])
+    normal = columns.T @ columns + np.diag(np.r_[np.full(n, weight**2), 0.0])
+    estimator = np.column_stack([root, np.ones(n)]) @ np.linalg.solve(normal, columns.T)
+    off = estimator @ problem.G.toarray() - np.eye(n)
+    expected = wide**2 * off @ problem.correlation @ off.T + HEIGHT**2 * estimator @ estimator.T
+    damping = Damping(weight, HEIGHT, HEIGHT / weight, wide)
+    sd = standard_deviation(problem.spectrum, damping, problem.grid, np.eye(problem.grid.n_ages))
+    np.testing.assert_allclose(sd.ravel(), np.sqrt(np.diag(expected)), rtol=1e-6)
+
+
+def test_spread_of_the_field_is_implied_by_the_departure():
+    """Truths drawn with a known spread, damped at several weights: the implied spread is it (over ten seeds)."""
+    for share in (0.3, 1.0, 10.0):
+        found = [implied_spread(case.spectrum, share * HEIGHT / SPREAD, HEIGHT) for case in map(Problem, range(10))]
+        assert np.sqrt(np.mean(np.square(found))) == pytest.approx(SPREAD, rel=0.2)
 
 
 def test_cumulative_deviation_equals_dense_algebra(problem):

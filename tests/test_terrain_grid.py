@@ -2,11 +2,11 @@
 
 import numpy as np
 import pytest
-from pyproj import CRS, Geod
+from pyproj import CRS, Geod, Transformer
 
 from fluvinv.errors import InputError, SettingsError
 from fluvinv.terrain import make_grid
-from fluvinv.terrain.grid import choose_map_crs, to_map
+from fluvinv.terrain.grid import areal_scale, choose_map_crs, to_map
 
 WGS84 = CRS.from_epsg(4326)
 UTM33 = CRS.from_epsg(32633)
@@ -185,3 +185,14 @@ def test_a_projection_of_elsewhere_is_refused():
     south_pole = CRS.from_proj4("+proj=gnom +lat_0=90 +datum=WGS84")
     with pytest.raises(SettingsError, match="domain"):
         to_map(WGS84, south_pole, np.array([0.0]), np.array([-45.0]))
+
+
+def test_areal_scale_of_known_projections():
+    """Spherical Mercator stretches areas by about sec^2 of the latitude: 4 at 60 degrees (common practice, no source).
+
+    A Lambert azimuthal equal-area CRS stretches them by 1 everywhere (IOGP 373-7-2, method 9820; seen).
+    """
+    x, y = Transformer.from_crs(4326, 3857, always_xy=True).transform(10.0, 60.0)
+    assert areal_scale(CRS(3857), x, y) == pytest.approx(4.0, rel=0.01)
+    assert areal_scale(CRS(3035), 4321000.0, 2500000.0) == pytest.approx(1.0, rel=1e-6)
+    assert areal_scale(CRS(4326), 10.0, 60.0) == 1.0

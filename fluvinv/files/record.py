@@ -84,7 +84,7 @@ def inversion_parts(result: Inversion, residual: np.ndarray, choose: str, ranges
         },
         "fit": {
             "rms_m": float(np.sqrt(np.mean(residual**2))),
-            "stack_rms_m": float(np.sqrt(np.mean((residual + result.fitted - result.fitted_by_stack) ** 2))),
+            "solved_rms_m": float(np.sqrt(np.mean((residual + result.fitted - result.solved) ** 2))),
             "held_out_rms_m": None,
             "reduced_chi_square": result.reduced_chi_square,
             "n_heights": result.n_rows,
@@ -103,6 +103,7 @@ def inversion_parts(result: Inversion, residual: np.ndarray, choose: str, ranges
             "range_km": m_to_km(ranges[0]),
             "range_myr": yr_to_myr(ranges[1]),
             "spread_mm_per_yr": m_per_yr_to_mm_per_yr(result.damping.spread),
+            "field_spread_mm_per_yr": m_per_yr_to_mm_per_yr(result.damping.field_spread),
             "background_mm_per_yr": m_per_yr_to_mm_per_yr(result.background),
             "log_evidence": result.log_evidence,
         },

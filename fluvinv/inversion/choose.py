@@ -23,12 +23,16 @@ class Damping:
     height_sd : float, m
         Standard deviation of the white height error.
     spread : float, m/yr
-        Standard deviation of the prior's field.
+        Standard deviation of the prior's field that the weight stands for.
+    field_spread : float, m/yr
+        Standard deviation of the field for which errors are stated: `spread` where that was given, and where
+        only the weight was chosen, what the fitted departure from the background implies (never less).
     """
 
     weight: float
     height_sd: float
     spread: float
+    field_spread: float
 
 
 @dataclass(frozen=True, slots=True)
@@ -141,7 +145,20 @@ def damping_at_corner(spectrum: Spectrum, curve: LCurve, height_sd: float | None
     if height_sd is None:
         freedom = spectrum.n_rows - spectrum.effective_parameters(curve.corner)
         height_sd = float(np.sqrt(spectrum.misfit(curve.corner) / freedom))
-    return Damping(curve.corner, height_sd, height_sd / curve.corner)
+    spread = height_sd / curve.corner
+    return Damping(curve.corner, height_sd, spread, max(spread, implied_spread(spectrum, curve.corner, height_sd)))
+
+
+def implied_spread(spectrum: Spectrum, weight: float, height_sd: float) -> float:
+    r"""Spread of the field (m/yr) that explains how far the damped estimate departs from the background.
+
+    With filter factors f the expected norm is E|w|^2 = sum f^2 (spread^2 + height_sd^2 / d): the corner of an
+    L-curve chooses a weight, not a spread, and the spread that goes with the weight may be far too small for
+    the rates that come out (a moment estimate).
+    """
+    factors = spectrum.filter(weight)
+    noise = height_sd**2 * float(np.sum(spectrum.values / (spectrum.values + weight**2) ** 2))
+    return float(np.sqrt(max(spectrum.roughness(weight) - noise, 0.0) / np.sum(factors**2)))
 
 
 def fixed_damping(spectrum: Spectrum, spread: float, height_sd: float | None) -> Damping:
@@ -164,4 +181,4 @@ def fixed_damping(spectrum: Spectrum, spread: float, height_sd: float | None) ->
         if not found.success or not np.isfinite(found.fun):
             raise NumericalError(f"the height error could not be estimated: {found.message}")
         height_sd = float(10**found.x * scale)
-    return Damping(height_sd / spread, height_sd, spread)
+    return Damping(height_sd / spread, height_sd, spread, spread)

@@ -21,6 +21,9 @@ from fluvinv.network import RiverNetwork
 #: Half width of a 95 % interval in standard deviations.
 Z95 = 1.959963984540054
 
+#: Least time that all paths together spend at a resolved node, as a share of the age step.
+LEAST_SAMPLED = 0.01
+
 #: Below so many unknowns linear algebra gains little from threads, and on a busy machine threads that wait for each
 #: other cost up to 30 times the time.
 _ONE_THREAD_BELOW = 12_000
@@ -76,9 +79,9 @@ class Inversion:
     share : 0 to 1
         Squared share of the averaging kernel within one map node and one age node.
     fitted : (n_nodes,) float array, m
-        Fitted height above base level.
-    fitted_by_stack : (n_nodes,) float array, m
-        Heights that the published rates leave when they are interpolated between map nodes and ages.
+        Height above base level that the published rates leave, interpolated between map nodes and ages.
+    solved : (n_nodes,) float array, m
+        Fitted height above base level on the finer grid that was solved on.
     background : float, m/yr
         The free background rate (of the fit without a bound on the rates).
     damping : Damping
@@ -100,7 +103,7 @@ class Inversion:
     sampled: np.ndarray
     share: np.ndarray
     fitted: np.ndarray
-    fitted_by_stack: np.ndarray
+    solved: np.ndarray
     background: float
     damping: Damping
     curve: LCurve | None
@@ -112,8 +115,11 @@ class Inversion:
 
     @property
     def resolved(self) -> np.ndarray:
-        """(n_ages, n_places) bool array: the estimate averages the truth nearby, and paths pass there."""
-        return (self.share >= RESOLVED_SHARE) & (self.sampled > 0)
+        """(n_ages, n_places) bool array: the estimate averages the truth nearby, and paths pass there.
+
+        Paths pass where all of them together spend at least a hundredth of an age step.
+        """
+        return (self.share >= RESOLVED_SHARE) & (self.sampled >= LEAST_SAMPLED * self.grid.ages[1])
 
     @property
     def well_sampled(self) -> np.ndarray:
@@ -183,14 +189,13 @@ def _invert(network, tau, grid, options, progress) -> Inversion:
     mean = nested.pick(estimate)
     if options.allow_subsidence:
         rate, low, high = mean, mean - Z95 * sd, mean + Z95 * sd
-        fitted = G @ estimate
     else:
         rate = _nonnegative(rows @ nested.spread, y, grid, options, damping).reshape(sd.shape)
-        low, high = truncated_interval(rate, mean, sd)
-        fitted = G @ (nested.spread @ rate.ravel())
+        low, high = truncated_interval(rate, sd)
     if not np.all(np.isfinite(rate)):
         raise NumericalError("the inversion gave rates that are not finite; the damping is too weak for this grid")
     mix = cumulative_mix(grid.ages)
+    fitted = G @ (nested.spread @ rate.ravel())
     n_free = spectrum.effective_parameters(damping.weight)
     return Inversion(
         grid=grid,
@@ -203,7 +208,7 @@ def _invert(network, tau, grid, options, progress) -> Inversion:
         sampled=(nested.spread.T @ G.sum(axis=0)).reshape(sd.shape),
         share=kernel_share(rows, spectrum, damping, grid, nested),
         fitted=fitted,
-        fitted_by_stack=G @ (nested.spread @ rate.ravel()),
+        solved=G @ estimate if options.allow_subsidence else fitted,
         background=background,
         damping=damping,
         curve=curve,

@@ -85,15 +85,15 @@ def nonnegative_rates(G: sparse.csr_array, y: np.ndarray, prior: FieldPrior, wei
     return nonnegative_least_squares(H / np.outer(scale, scale), (G.T @ y) / scale) / scale
 
 
-def truncated_interval(rate: np.ndarray, mean: np.ndarray, sd: np.ndarray, tail: float = 0.025):
-    """Central interval of each Gaussian marginal cut off at zero, stretched to hold the constrained rate.
+def truncated_interval(rate: np.ndarray, sd: np.ndarray, tail: float = 0.025):
+    """Central interval of a Gaussian about the constrained rate, cut off at zero.
 
     Parameters
     ----------
     rate : array, m/yr
         Constrained estimate.
-    mean, sd : arrays of the same shape, m/yr
-        Unconstrained posterior.
+    sd : array of the same shape, m/yr
+        Standard deviation without the constraint.
     tail : float
         Probability left out at either end.
 
@@ -103,10 +103,10 @@ def truncated_interval(rate: np.ndarray, mean: np.ndarray, sd: np.ndarray, tail:
 
     Notes
     -----
-    Each marginal is cut for itself; what the constraint elsewhere adds is not counted.
+    An approximation: each marginal is cut for itself, and what the constraint elsewhere adds is not counted.
     """
     safe = np.maximum(sd, np.finfo(float).tiny)
-    survival = stats.norm.sf(-mean / safe)
-    high = mean + safe * stats.norm.isf(tail * survival)
-    low = mean + safe * stats.norm.isf((1 - tail) * survival)
+    survival = stats.norm.sf(-rate / safe)
+    high = rate + safe * stats.norm.isf(tail * survival)
+    low = rate + safe * stats.norm.isf((1 - tail) * survival)
     return np.minimum(np.maximum(low, 0.0), rate), np.maximum(high, rate)

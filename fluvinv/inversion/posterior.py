@@ -16,7 +16,10 @@ def standard_deviation(spectrum: Spectrum, damping: Damping, grid: UpliftGrid, m
     r"""Posterior standard deviation of linear mixtures over age of the rate at each place.
 
     The posterior covariance of the field is spread^2 (R - Z F Z') with R the prior's correlation, Z = S V and
-    F the filter factors (Tarantola 2005, eq. 3.38, in spectral form). The free background adds its own part:
+    F the filter factors (Tarantola 2005, eq. 3.38, in spectral form). Where the damping's weight is not that of
+    the field's spread, the error of the damped estimate has for each direction the bias (1 - f) times the
+    spread and the noise f^2 height_sd^2 / d; F is then 2 f - f^2 - (height_sd / spread)^2 f^2 / d, which is f
+    when the weight is the spread's own. The free background adds its own part:
     u = (1 - 1 g') f + error of the background, of variance height_sd^2 / tau'tau.
 
     Parameters
@@ -36,7 +39,10 @@ def standard_deviation(spectrum: Spectrum, damping: Damping, grid: UpliftGrid, m
     """
     n_ages, n_places = grid.n_ages, grid.n_places
     g = spectrum.background_row
-    basis = spectrum.prior.root(spectrum.vectors) * np.sqrt(spectrum.filter(damping.weight))
+    factors = spectrum.filter(damping.weight)
+    ratio = (damping.height_sd / damping.field_spread) ** 2
+    gain = 2 * factors - factors**2 - ratio * spectrum.values / (spectrum.values + damping.weight**2) ** 2
+    basis = spectrum.prior.root(spectrum.vectors) * np.sqrt(np.maximum(gain, 0.0))
     carried = basis.T @ g
     basis -= carried
     learnt = np.empty((mix.shape[0], n_places))
@@ -47,9 +53,9 @@ def standard_deviation(spectrum: Spectrum, damping: Damping, grid: UpliftGrid, m
     own = np.einsum("ij,jk,ik->i", mix, spectrum.prior.time, mix)[:, None]
     total = mix.sum(axis=1)[:, None]
     cross = mix @ correlated.reshape(n_ages, n_places)
-    background = damping.weight**2 / spectrum.tau_squared + g @ correlated
+    background = ratio / spectrum.tau_squared + g @ correlated
     variance = own - 2 * total * cross + total**2 * background - learnt
-    return damping.spread * np.sqrt(np.maximum(variance, 0.0))
+    return damping.field_spread * np.sqrt(np.maximum(variance, 0.0))
 
 
 def cumulative_mix(ages: np.ndarray) -> np.ndarray:

@@ -158,7 +158,7 @@ def suggest_spacing(area: float, n_places: int = 120) -> float:
     return nice_number(np.sqrt(area / n_places))
 
 
-def suggest_step(longest: float, n_steps: int = 8) -> float:
+def suggest_step(longest: float, n_steps: int = 9) -> float:
     """Age step (yr) that divides the longest travel time (yr) into about `n_steps`."""
     return nice_number(longest / n_steps)
 

@@ -13,6 +13,7 @@ from fluvinv.network import RiverNetwork
 INK = "#26323a"
 FAINT = "#9aa7ad"
 WATER = "#2b6f97"
+PALE_WATER = "#8fb9cf"
 ACCENT = "#b5432e"
 HATCH = "#5d676d"
 #: Distinct without colour vision trouble, dark enough on white; for the largest basins in turn.

@@ -15,6 +15,7 @@ from fluvinv.report.drawing import (
     FAINT,
     HATCH,
     INK,
+    PALE_WATER,
     WATER,
     draw_rivers,
     frame_map,
@@ -73,7 +74,7 @@ def uplift_history(inversion: Inversion, network: RiverNetwork) -> Figure:
     all_axes = np.atleast_1d(figure.subplots(n_rows, n_cols, squeeze=False)).ravel()
     for axes, age in zip(all_axes, shown, strict=False):
         image = axes.pcolormesh(*edges, stack[age], cmap=RATE_COLOURS, vmin=low, vmax=high, rasterized=True)
-        draw_rivers(axes, network, colour=WATER, width=0.2)
+        draw_rivers(axes, network, colour=PALE_WATER, width=0.2)
         _hatch_cells(axes, edges, resolved[age] == 0)
         frame_map(axes, network, margin=0.07)
         axes.set_title(f"{yr_to_myr(grid.ages[age]):.3g} Ma")
@@ -116,7 +117,7 @@ def histories(inversion: Inversion, network: RiverNetwork, known: np.ndarray | N
     scale_bar(mosaic["map"])
     values = m_per_yr_to_mm_per_yr(np.stack([inversion.rate, inversion.low, inversion.high]))
     top = 1.05 * np.max(values[2][:, chosen])
-    bottom = min(0.0, np.min(values[0][:, chosen]))
+    bottom = min(0.0, 1.05 * np.min(values[1][:, chosen]))
     for name, place in zip("ABCDEF", chosen, strict=False):
         axes = mosaic[name]
         rate, low, high = values[:, :, place]
@@ -172,7 +173,8 @@ def trade_off(inversion: Inversion) -> Figure:
     figure = new_figure(8, 3.6)
     left, right = figure.subplots(1, 2)
     left.loglog(rms, m_per_yr_to_mm_per_yr(curve.rough_norm), color=INK, linewidth=1.4)
-    left.plot(rms[at], m_per_yr_to_mm_per_yr(curve.rough_norm[at]), "o", color=ACCENT, label="corner, chosen")
+    label = "corner, chosen" if curve.clear else "greatest bend, no clear corner"
+    left.plot(rms[at], m_per_yr_to_mm_per_yr(curve.rough_norm[at]), "o", color=ACCENT, label=label)
     left.xaxis.set_major_locator(LogLocator(base=10, subs=(1.0, 2.0, 5.0)))
     left.xaxis.set_major_formatter(ScalarFormatter())
     left.xaxis.set_minor_formatter(NullFormatter())
@@ -181,6 +183,6 @@ def trade_off(inversion: Inversion) -> Figure:
     left.legend()
     right.semilogx(spread, curve.curvature, color=INK, linewidth=1.4)
     right.axvline(m_per_yr_to_mm_per_yr(inversion.damping.spread), color=ACCENT, linewidth=1)
-    right.set_xlabel("spread of the rate allowed (mm/yr)")
+    right.set_xlabel("spread that the weight stands for (mm/yr)")
     right.set_ylabel("curvature")
     return figure

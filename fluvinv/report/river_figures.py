@@ -54,7 +54,7 @@ def network_map(network: RiverNetwork) -> Figure:
     scale_bar(axes)
     north_arrow(axes)
     axes.set_title(
-        f"{network.n_basins} basins, {network.n_rivers} rivers, {network.n_nodes} river nodes;"
+        f"{network.n_basins} basins, {network.n_rivers:,} rivers, {network.n_nodes:,} river nodes;"
         f" largest basin {m2_to_km2(network.area.max()):,.0f} km²"
     )
     axes.legend(handles=[Line2D([], [], marker="o", linestyle="", color=ACCENT, label="outlet")], loc="lower right")
@@ -99,7 +99,8 @@ def against_coordinate(network: RiverNetwork, coordinate: np.ndarray, label: str
             colour = BASIN_COLOURS[rank] if rank < len(BASIN_COLOURS) else FAINT
             _plot_basin(axes, network, basins[rank], coordinate, height, colour, width=0.6)
         axes.set_xlabel(label)
-        axes.set_title(title)
+        if fitted is not None:
+            axes.set_title(title)
     all_axes[0].set_ylabel("height above base level (m)")
     handles = [
         Line2D([], [], color=BASIN_COLOURS[rank], label=f"basin {network.basin_id[network.outlet[basin]]}")
@@ -107,7 +108,7 @@ def against_coordinate(network: RiverNetwork, coordinate: np.ndarray, label: str
     ]
     if basins.size > len(BASIN_COLOURS):
         handles.append(Line2D([], [], color=FAINT, label="others"))
-    figure.legend(handles=handles, loc="outside lower center", ncols=7)
+    figure.legend(handles=handles, loc="outside lower center", ncols=7 if panels == 2 else 4)
     return figure
 
 

@@ -21,12 +21,10 @@ def verdict(result: Inversion) -> list[str]:
     judged = result.well_sampled
     sentences = [f"{resolved[judged].mean():.0%} of the well-sampled nodes are resolved (map node and age node)."]
     ages = yr_to_myr(grid.ages)
-    enough = resolved.sum(axis=1) >= max(3, 0.1 * resolved.sum(axis=1).max())
-    if enough.any():
-        oldest = ages[np.flatnonzero(enough)[-1]]
-        sentences.append(
-            f"Resolved nodes reach back to {oldest:.3g} Ma at a tenth or more of the best-covered age's places."
-        )
+    count = resolved.sum(axis=1)
+    some = np.unique(np.linspace(0, np.flatnonzero(count)[-1], 4).round().astype(int))
+    by_age = ", ".join(f"{count[age]} at {ages[age]:.3g} Ma" for age in some)
+    sentences.append(f"Of {grid.n_places} map nodes, resolved are {by_age}; none that is older.")
     rates = m_per_yr_to_mm_per_yr(result.rate)
     share = result.rate_sd[resolved] / np.maximum(np.abs(result.rate[resolved]), 1e-30)
     lowest, highest = np.quantile(rates[resolved], [0.05, 0.95])
@@ -92,20 +90,33 @@ def inversion_lines(result: Inversion, rms: float, choose: str, ranges: tuple[fl
         f"{grid.n_unknowns:,}: {grid.n_places:,} map nodes {m_to_km(grid.spacing):g} km apart times {grid.n_ages} ages"
         f" {yr_to_myr(grid.ages[1]):g} Myr apart; {result.method} solver.",
     )
-    how = {"l-curve": "corner of the L-curve", "fixed": "fixed by the settings"}[choose]
+    weight_spread, departs, background = (
+        _plain(m_per_yr_to_mm_per_yr(value)) for value in (damping.spread, damping.field_spread, result.background)
+    )
+    how = {
+        "l-curve": f"corner of the L-curve, the weight of a spread of {weight_spread} mm/yr; the fitted rates depart"
+        f" from the background as a spread of {departs} mm/yr would, and errors are for that",
+        "fixed": f"fixed by the settings: a spread of {departs} mm/yr",
+    }[choose]
     lines += _entry(
         "Damping",
-        f"{how}: rates vary by {_plain(m_per_yr_to_mm_per_yr(damping.spread))} mm/yr about a background of"
-        f" {_plain(m_per_yr_to_mm_per_yr(result.background))} mm/yr, over ranges of {m_to_km(ranges[0]):.3g} km and"
-        f" {yr_to_myr(ranges[1]):.3g} Myr.",
+        f"{how}; background {background} mm/yr, ranges {m_to_km(ranges[0]):.3g} km and {yr_to_myr(ranges[1]):.3g} Myr.",
     )
     return lines + _entry(
         "Fit",
         f"rms misfit {rms:.3g} m, height error {damping.height_sd:.3g} m taken as white; the heights determine about"
-        f" {result.effective_parameters:.0f} numbers; reduced chi-square {result.reduced_chi_square:.3g}. Misfit adds"
-        " up along real rivers and is not white, so the stated intervals are too narrow: on grown landscapes whose"
-        " divides moved, 95 % intervals of this kind held the truth at a fifth to two thirds of the nodes.",
+        f" {result.effective_parameters:.0f} numbers; reduced chi-square {result.reduced_chi_square:.3g}.",
     )
+
+
+#: What is known about the stated intervals, by the way the damping was chosen.
+ON_INTERVALS = {
+    "l-curve": "The stated errors count what the damping hides, but take the misfit as white, and what the physics"
+    " leaves out adds up along a river. On eleven grown landscapes with moving or standing divides the 95 % intervals"
+    " held the truth at 90 to 100 % of the well-sampled nodes; rock that changes was not among them.",
+    "fixed": "The stated errors hold for the stated spread and take the misfit as white; what the physics leaves out"
+    " adds up along a river, so they are too small where drainage moved or rock changes.",
+}
 
 
 def comparison_line(comparison: Comparison) -> list[str]:

@@ -9,10 +9,13 @@ from fluvinv.errors import InputError, SettingsError
 from fluvinv.network import RiverNetwork
 from fluvinv.terrain.channels import LEAST_CELLS, auto_channel_area, connect_channels
 from fluvinv.terrain.completeness import CUT_BY_EDGE, CUT_BY_VOID, Drainage, drain
-from fluvinv.terrain.grid import Grid
+from fluvinv.terrain.grid import Grid, areal_scale
 from fluvinv.terrain.routing import NOT_LAND, route
 from fluvinv.terrain.sea import SeaReport, find_sea
 from fluvinv.units import m2_to_km2
+
+#: Areas stretched by more than this by the DEM's CRS are worth a warning.
+MOST_STRETCH = 0.03
 
 
 @dataclass(frozen=True, slots=True)
@@ -40,6 +43,8 @@ class TerrainReport:
         Area of the largest basin in the network.
     map_crs : pyproj.CRS
         CRS of the network's map coordinates.
+    areal_scale : float
+        How many times too large the DEM's CRS draws areas in the middle of the rivers.
     """
 
     n_land: int
@@ -51,6 +56,7 @@ class TerrainReport:
     dropped: dict[str, int]
     largest_basin: float
     map_crs: CRS
+    areal_scale: float
 
     @property
     def share_affected(self) -> float:
@@ -64,13 +70,19 @@ class TerrainReport:
         found = []
         if self.share_affected > 0:
             found.append(
-                f"{self.share_affected:.0%} of the river nodes have catchments that the DEM does not hold as a whole "
+                f"{self.share_affected:.0%} of the river nodes have catchments that the DEM does not hold as a whole"
                 "(terrain.incomplete: keep): their areas and travel times are wrong."
             )
         if self.sea.void_taken_as in ("sea", "mixed"):
             found.append(
                 f"{self.sea.n_void_sea} of {self.sea.n_void} void cells were taken for sea; if they are gaps in "
                 "the land, set catchment.nodata to void."
+            )
+        if abs(self.areal_scale - 1) > MOST_STRETCH:
+            found.append(
+                f"the DEM's CRS draws areas {self.areal_scale:.3g} times as large as they are, and nothing corrects it:"
+                " lengths, areas and travel times are wrong with it. Warp the DEM to a CRS made for this place, or to "
+                "longitude and latitude."
             )
         return found
 
@@ -145,6 +157,7 @@ def build_network(
         dropped=not_usable if incomplete == "drop" else dict.fromkeys(not_usable, 0),
         largest_basin=float(network.area[network.outlet[0]]),
         map_crs=map_crs,
+        areal_scale=areal_scale(grid.crs, float(np.mean(network.x)), float(np.mean(network.y))),
     )
     return network, report
 

@@ -3,10 +3,10 @@
 from dataclasses import dataclass
 
 import numpy as np
-from pyproj import CRS, Transformer
+from pyproj import CRS, Proj, Transformer
 from pyproj.crs import ProjectedCRS
 from pyproj.crs.coordinate_operation import LambertAzimuthalEqualAreaConversion
-from pyproj.exceptions import CRSError
+from pyproj.exceptions import CRSError, ProjError
 
 from fluvinv.errors import InputError, SettingsError
 
@@ -264,6 +264,24 @@ def _named_crs(projection: str) -> CRS:
 
 def _in_metres(crs: CRS) -> bool:
     return crs.is_projected and all(axis.unit_conversion_factor == 1 for axis in crs.axis_info[:2])
+
+
+def areal_scale(crs: CRS, x: float, y: float) -> float:
+    """How many times too large a projected CRS draws areas at a place; 1 for a geographic or a local CRS.
+
+    Parameters
+    ----------
+    crs : pyproj.CRS
+    x, y : float
+        A place in that CRS.
+    """
+    if not crs.is_projected or crs.geodetic_crs is None:
+        return 1.0
+    lon, lat = Transformer.from_crs(crs, crs.geodetic_crs, always_xy=True).transform(x, y)
+    try:
+        return float(Proj(crs).get_factors(lon, lat).areal_scale)
+    except ProjError:
+        return 1.0
 
 
 def to_map(crs: CRS, map_crs: CRS, x: np.ndarray, y: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
