@@ -4,9 +4,10 @@ import numpy as np
 import pytest
 from scipy.optimize import lsq_linear
 from scipy.sparse.linalg import lsmr, lsqr
+from scipy.stats import truncnorm
 
 from fluvinv.inversion.choose import curvature, l_curve
-from fluvinv.inversion.nonnegative import nonnegative_least_squares
+from fluvinv.inversion.nonnegative import interval_above_zero, nonnegative_least_squares
 from fluvinv.inversion.prior import FieldPrior
 from fluvinv.inversion.solve import Spectrum
 
@@ -155,3 +156,13 @@ def test_non_negative_least_squares_against_a_library(seed):
     assert pull.min() > -1e-9
     assert abs(x @ pull) < 1e-9
     np.testing.assert_allclose(x, lsq_linear(A, b, bounds=(0, np.inf), method="bvls", tol=1e-14).x, atol=1e-8)
+
+
+@pytest.mark.parametrize("rate", [0.0, 0.3, 1.0, 1.9, 2.5, 40.0])
+def test_interval_above_zero_holds_its_share(rate):
+    """Against SciPy's truncated normal: 95 % inside, ends of equal density, the rate between them."""
+    low, high = (float(end) for end in interval_above_zero(np.array(rate), np.array(1.0)))
+    cut = truncnorm(-rate, np.inf, loc=rate)
+    assert cut.cdf(high) - cut.cdf(low) == pytest.approx(0.95, abs=1e-9)
+    assert 0 <= low <= rate < high
+    assert low == 0 or cut.pdf(low) == pytest.approx(cut.pdf(high), rel=1e-6)

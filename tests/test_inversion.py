@@ -245,6 +245,19 @@ def test_rates_held_non_negative():
     assert held.low.min() >= 0.0
     assert np.all(held.low <= held.rate)
     assert np.all(held.rate <= held.high)
+    above = held.rate > 0
+    assert np.all(held.low[above] < held.rate[above])
+    assert np.all(held.rate[above] < held.high[above])
+    assert held.rate_sd.min() > 0
+
+
+def test_fitted_heights_are_those_of_the_published_rates():
+    """What a reader gets who integrates the published stack along the rivers, whatever grid was solved on."""
+    case = Problem(5)
+    object.__setattr__(case.network, "height", case.y)
+    result = invert(case.network, case.tau, case.grid, InversionOptions(3e4, 1.5e6, "fixed", SPREAD, HEIGHT))
+    np.testing.assert_allclose(result.fitted, case.G @ result.rate.ravel(), atol=1e-8 * np.abs(case.y).max())
+    assert np.abs(result.fitted - result.solved).max() > 0
 
 
 def test_no_heights_no_inversion(problem):

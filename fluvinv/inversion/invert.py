@@ -10,7 +10,7 @@ from threadpoolctl import threadpool_limits
 from fluvinv.errors import NumericalError
 from fluvinv.inversion.choose import Damping, LCurve, damping_at_corner, fixed_damping, l_curve
 from fluvinv.inversion.nesting import nest
-from fluvinv.inversion.nonnegative import nonnegative_rates, truncated_interval
+from fluvinv.inversion.nonnegative import interval_above_zero, nonnegative_rates
 from fluvinv.inversion.posterior import RESOLVED_SHARE, cumulative_mix, kernel_share, standard_deviation
 from fluvinv.inversion.prior import FieldPrior, make_prior
 from fluvinv.inversion.sensitivity import sensitivity
@@ -191,7 +191,7 @@ def _invert(network, tau, grid, options, progress) -> Inversion:
         rate, low, high = mean, mean - Z95 * sd, mean + Z95 * sd
     else:
         rate = _nonnegative(rows @ nested.spread, y, grid, options, damping).reshape(sd.shape)
-        low, high = truncated_interval(rate, sd)
+        low, high = interval_above_zero(rate, sd)
     if not np.all(np.isfinite(rate)):
         raise NumericalError("the inversion gave rates that are not finite; the damping is too weak for this grid")
     mix = cumulative_mix(grid.ages)

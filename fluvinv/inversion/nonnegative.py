@@ -85,8 +85,8 @@ def nonnegative_rates(G: sparse.csr_array, y: np.ndarray, prior: FieldPrior, wei
     return nonnegative_least_squares(H / np.outer(scale, scale), (G.T @ y) / scale) / scale
 
 
-def truncated_interval(rate: np.ndarray, sd: np.ndarray, tail: float = 0.025):
-    """Central interval of a Gaussian about the constrained rate, cut off at zero.
+def interval_above_zero(rate: np.ndarray, sd: np.ndarray, level: float = 0.95):
+    """Shortest interval of a Gaussian about the constrained rate, cut off at zero.
 
     Parameters
     ----------
@@ -94,19 +94,20 @@ def truncated_interval(rate: np.ndarray, sd: np.ndarray, tail: float = 0.025):
         Constrained estimate.
     sd : array of the same shape, m/yr
         Standard deviation without the constraint.
-    tail : float
-        Probability left out at either end.
+    level : float
+        Probability inside.
 
     Returns
     -------
     low, high : arrays, m/yr
+        Symmetric about the rate where that stays above zero, from zero upward elsewhere.
 
     Notes
     -----
     An approximation: each marginal is cut for itself, and what the constraint elsewhere adds is not counted.
     """
     safe = np.maximum(sd, np.finfo(float).tiny)
-    survival = stats.norm.sf(-rate / safe)
-    high = rate + safe * stats.norm.isf(tail * survival)
-    low = rate + safe * stats.norm.isf((1 - tail) * survival)
-    return np.minimum(np.maximum(low, 0.0), rate), np.maximum(high, rate)
+    mass = stats.norm.cdf(rate / safe)
+    half = safe * stats.norm.ppf(0.5 * (1 + level * mass))
+    from_zero = rate + safe * stats.norm.isf((1 - level) * mass)
+    return np.where(half <= rate, rate - half, 0.0), np.where(half <= rate, rate + half, from_zero)
