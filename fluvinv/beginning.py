@@ -3,6 +3,8 @@
 import os
 from pathlib import Path
 
+import numpy as np
+
 from fluvinv.files import publish, rasters
 from fluvinv.files.first_settings import first_settings_text
 from fluvinv.files.settings_keys import naming_keys
@@ -33,7 +35,14 @@ def start(dem: Path, output: Path | None, overwrite: bool) -> Outcome:
     text = first_settings_text(written, dem.stem, guesses)
     publish.write_text(target, text, overwrite, [dem])
     n_rows, n_cols = grid.height.shape
-    lines = summary.entry("DEM", [f"{n_rows:,} x {n_cols:,} cells, {grid.crs.name}, {int(grid.void.sum()):,} void."])
+    cell = m_to_km(float(np.median(grid.step_lengths().south)))
+    lines = summary.entry(
+        "DEM",
+        [
+            f"{n_rows:,} x {n_cols:,} cells of {cell:.3g} km, {grid.crs.name}; {int(grid.void.sum()):,} cells are void,"
+            f" heights run from {np.nanmin(grid.height):,.0f} to {np.nanmax(grid.height):,.0f} m."
+        ],
+    )
     for key, (value, reason) in guesses.items():
         lines += summary.entry("Guess", [f"{key}: {value} ({reason})."])
     lines += summary.entry("Next", [f"read {target}, set the erodibility you believe in, then: fluvinv run {target}"])

@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from fluvinv.inversion import nice_number, suggest_spacing, suggest_step
+from fluvinv.inversion import suggest_spacing, suggest_step
 from fluvinv.streampower.analytic import HackRiver
 from fluvinv.terrain import Grid, find_sea
 from fluvinv.units import m2_to_km2, m_per_yr_to_mm_per_yr, m_to_km, yr_to_myr
@@ -41,16 +41,20 @@ def first_guesses(grid: Grid, base_level: float = 0.0) -> dict[str, tuple[object
     relief = float(np.quantile(heights, 0.99)) - (base_level if sea.sea.any() else float(heights.min()))
     relief = max(relief, 1.0)
     reach = 0.5 * np.sqrt(area)
-    head = max(0.02 * reach, np.sqrt(float(np.median(area_by_row))))
+    cell = np.sqrt(float(np.median(area_by_row)))
+    head = max(0.02 * reach, cell)
     longest = relief / TYPICAL_RATE
     unit_river = HackRiver(reach, HACK_FACTOR, HACK_POWER, 1.0, AREA_EXPONENT)
     erodibility = float(f"{float(unit_river.travel_time(min(head, 0.5 * reach))) / longest:.2g}")
-    spacing = max(suggest_spacing(area), nice_number(1.01 * np.sqrt(float(np.median(area_by_row)))))
+    spacing = suggest_spacing(area)
+    if spacing < 1.5 * cell:
+        spacing = float(f"{1.5 * cell:.2g}")
     guesses = {
         "stream_power.erodibility": (
             erodibility,
             f"a river {m_to_km(reach):.3g} km long under Hack's law, in balance with"
-            f" {m_per_yr_to_mm_per_yr(TYPICAL_RATE):.3g} mm/yr, would stand at the DEM's relief of {relief:,.0f} m;"
+            f" {m_per_yr_to_mm_per_yr(TYPICAL_RATE):.3g} mm/yr (the mean of basins, Portenga & Bierman"
+            f" 2011), would stand at the DEM's relief of {relief:,.0f} m;"
             " sets the clock, so calibrate it",
         ),
         "stream_power.area_exponent": (AREA_EXPONENT, "the middle of the usual 0.4 to 0.6"),

@@ -77,7 +77,7 @@ def clock_lines(erodibility: float, area_exponent: float, longest: float) -> lis
     return _entry(
         "Clock",
         f"erodibility {erodibility:.4g} {unit} at area exponent {area_exponent:g} was given, not found: heights alone"
-        " cannot tell it, and another value a times as large fits as well with rates times a and ages over a."
+        " cannot tell it, and c times the value fits as well, with rates times c and ages divided by c."
         f" The longest travel time is {yr_to_myr(longest):.3g} Myr.",
     )
 
