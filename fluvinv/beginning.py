@@ -9,7 +9,7 @@ from fluvinv.files import publish, rasters
 from fluvinv.files.first_settings import first_settings_text
 from fluvinv.files.settings_keys import naming_keys
 from fluvinv.guesses import first_guesses
-from fluvinv.inversion import make_prior, nest, predict_cost
+from fluvinv.inversion import nest_with_prior, predict_cost
 from fluvinv.layout import lay_out
 from fluvinv.pipeline import Outcome, Progress, draw_rivers, open_job, refuse_target, rivers_lines, target_folder
 from fluvinv.report import summary
@@ -60,8 +60,8 @@ def check(settings_path: Path, output: Path | None, overwrite: bool, progress: P
         layout = lay_out(job.settings, rivers.network, rivers.tau, job.grid)
         job.step("", 1.0)
         grid, options = layout.grid, layout.options
-        solved = nest(grid).fine
-        n_modes = make_prior(solved, options.range_space, options.range_time).n_modes
+        nested, prior = nest_with_prior(grid, options.range_space, options.range_time)
+        solved, n_modes = nested.fine, prior.n_modes
         cost = predict_cost(rivers.tau, rivers.network.distance, solved, n_modes)
         n_rows, n_cols = job.grid.height.shape
         memory = (cost.memory + 60.0 * n_rows * n_cols) / 2**30

@@ -2,27 +2,19 @@
 
 import numpy as np
 import pytest
-from scipy import sparse
 from trees import random_network
 
 from fluvinv.errors import NumericalError
 from fluvinv.inversion import InversionOptions, age_nodes, invert, make_grid, sensitivity
 from fluvinv.inversion import invert as invert_function
 from fluvinv.inversion.choose import Damping, fixed_damping, implied_spread, l_curve
-from fluvinv.inversion.nesting import Nested, nest
+from fluvinv.inversion.nesting import as_it_is, nest
 from fluvinv.inversion.posterior import cumulative_mix, kernel_share, standard_deviation
 from fluvinv.inversion.prior import make_prior, matern_correlation
 from fluvinv.inversion.solve import decompose
 from fluvinv.streampower import travel_time
 
 HEIGHT, SPREAD = 3.0, 1e-4
-
-
-def not_nested(grid):
-    """A grid that is solved on as it is."""
-    return Nested(
-        grid, np.arange(grid.n_places), np.arange(grid.n_ages), sparse.eye_array(grid.n_unknowns, format="csr")
-    )
 
 
 class Problem:
@@ -141,7 +133,7 @@ def test_kernel_share_equals_dense_algebra(problem):
     grid = problem.grid
     squares = problem.kernel**2
     expected = (squares * neighbours(grid)).sum(axis=1) / squares.sum(axis=1)
-    ours = kernel_share(problem.G, problem.spectrum, problem.damping, grid, not_nested(grid)).ravel()
+    ours = kernel_share(problem.G, problem.spectrum, problem.damping, grid, as_it_is(grid)).ravel()
     np.testing.assert_allclose(ours, expected, atol=1e-4)  # filter factors below 1e-4 are left out
 
 

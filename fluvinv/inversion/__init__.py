@@ -3,8 +3,7 @@
 from fluvinv.inversion.compare import Comparison, compare, history_at_nodes
 from fluvinv.inversion.cost import Cost, predict_cost
 from fluvinv.inversion.invert import Inversion, InversionOptions, invert
-from fluvinv.inversion.nesting import nest
-from fluvinv.inversion.prior import make_prior
+from fluvinv.inversion.nesting import nest_with_prior
 from fluvinv.inversion.sensitivity import sensitivity
 from fluvinv.inversion.solve import DENSE_LIMIT
 from fluvinv.inversion.uplift_grid import (
@@ -30,8 +29,7 @@ __all__ = [
     "history_at_nodes",
     "invert",
     "make_grid",
-    "make_prior",
-    "nest",
+    "nest_with_prior",
     "nice_number",
     "predict_cost",
     "sensitivity",

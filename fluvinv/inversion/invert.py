@@ -9,7 +9,7 @@ from threadpoolctl import threadpool_limits
 
 from fluvinv.errors import NumericalError
 from fluvinv.inversion.choose import Damping, LCurve, damping_at_corner, fixed_damping, l_curve
-from fluvinv.inversion.nesting import nest
+from fluvinv.inversion.nesting import nest_with_prior
 from fluvinv.inversion.nonnegative import interval_above_zero, nonnegative_rates
 from fluvinv.inversion.posterior import RESOLVED_SHARE, cumulative_mix, kernel_share, standard_deviation
 from fluvinv.inversion.prior import FieldPrior, make_prior
@@ -175,12 +175,11 @@ def invert(
 
 def _invert(network, tau, grid, options, progress) -> Inversion:
     progress("rows")
-    nested = nest(grid)
+    nested, prior = nest_with_prior(grid, options.range_space, options.range_time)
     G = sensitivity(network, tau, nested.fine)
     used = np.flatnonzero(tau > 0)
     rows, y = G[used], network.relative_height[used]
     progress("decomposition")
-    prior = make_prior(nested.fine, options.range_space, options.range_time)
     spectrum, damping, curve = _decompose_and_choose(rows, y, tau[used], prior, options, progress)
     progress("errors")
     estimate, background = spectrum.solution(damping.weight)

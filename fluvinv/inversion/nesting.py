@@ -5,10 +5,11 @@ from dataclasses import dataclass
 import numpy as np
 from scipy import sparse
 
+from fluvinv.inversion.prior import FieldPrior, make_prior
 from fluvinv.inversion.uplift_grid import UpliftGrid
 
-#: A grid is refined only while the finer one stays below so many unknowns and places.
-MOST_UNKNOWNS, MOST_PLACES = 30_000, 3_000
+#: A grid is refined only while the finer one stays below so many unknowns, places and modes of the prior.
+MOST_UNKNOWNS, MOST_PLACES, MOST_MODES = 30_000, 2_500, 4_000
 
 
 @dataclass(frozen=True, slots=True)
@@ -47,8 +48,35 @@ def _halves(n: int) -> sparse.csr_array:
     return sparse.csr_array((weights, (rows, columns)), shape=(2 * n - 1, n))
 
 
+def nest_with_prior(grid: UpliftGrid, range_space: float, range_time: float) -> tuple[Nested, FieldPrior]:
+    """Refine a grid where that stays affordable, and make the prior on the grid that is solved on.
+
+    Parameters
+    ----------
+    grid : UpliftGrid
+    range_space : float, m
+    range_time : float, yr
+
+    Returns
+    -------
+    nested : Nested
+    prior : FieldPrior
+    """
+    nested = nest(grid)
+    prior = make_prior(nested.fine, range_space, range_time)
+    if nested.fine is grid or prior.n_modes <= MOST_MODES:
+        return nested, prior
+    return as_it_is(grid), make_prior(grid, range_space, range_time)
+
+
+def as_it_is(grid: UpliftGrid) -> Nested:
+    """A grid that is solved on without refinement."""
+    identity = sparse.csr_array(sparse.eye_array(grid.n_unknowns))
+    return Nested(grid, np.arange(grid.n_places), np.arange(grid.n_ages), identity)
+
+
 def nest(grid: UpliftGrid) -> Nested:
-    """Refine a grid by two in space and age, where that stays affordable.
+    """Refine a grid by two in space and age, where the size of the finer one allows it.
 
     Bilinear interpolation between map nodes flattens a field that curves, by an amount that grows with the
     square of the spacing; with thousands of heights that is more than a standard deviation. On a grid twice
@@ -71,8 +99,7 @@ def nest(grid: UpliftGrid) -> Nested:
             inside[d_row : d_row + 2 * cells.shape[0] : 2, d_col : d_col + 2 * cells.shape[1] : 2] |= cells
     n_places, n_ages = int(inside.sum()), 2 * grid.n_ages - 1
     if n_places > MOST_PLACES or n_places * n_ages > MOST_UNKNOWNS:
-        identity = sparse.csr_array(sparse.eye_array(grid.n_unknowns))
-        return Nested(grid, np.arange(grid.n_places), np.arange(grid.n_ages), identity)
+        return as_it_is(grid)
     place = np.full(inside.shape, -1, dtype=np.int32)
     place[inside] = np.arange(n_places, dtype=np.int32)
     fine = UpliftGrid(

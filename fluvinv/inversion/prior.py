@@ -8,7 +8,7 @@ from scipy import linalg, sparse, special
 from fluvinv.inversion.uplift_grid import UpliftGrid
 
 #: Modes whose prior variance is below this share of the largest are left out.
-SMALLEST_MODE = 1e-6
+SMALLEST_MODE = 1e-5
 
 #: Smoothness of the field in space and in time. Rougher fields (1 and 1/2) let the rate between two nodes differ so
 #: much from the line between them that the answer depends on the grid: halving spacing and step widened the

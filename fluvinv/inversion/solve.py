@@ -17,7 +17,7 @@ from fluvinv.errors import NumericalError
 from fluvinv.inversion.prior import FieldPrior
 
 #: Above this many modes of the prior only the best determined directions are computed, by Lanczos iteration.
-DENSE_LIMIT = 6000
+DENSE_LIMIT = 4000
 
 #: Entries of the dense products of rows and modes that are held at once.
 _ENTRIES_AT_ONCE = 20_000_000
