@@ -13,8 +13,7 @@ import numpy as np
 from rows import AREA_EXPONENT, ERODIBILITY, island
 from scipy import linalg
 
-from fluvinv.inversion import InversionOptions, age_nodes, invert, make_grid
-from fluvinv.inversion.prior import make_prior
+from fluvinv.inversion import InversionOptions, age_nodes, invert, make_grid, nest_with_prior
 from fluvinv.streampower import travel_time
 
 N_CELLS = 220
@@ -54,7 +53,7 @@ def main() -> None:
         grid = make_grid(network, spacing * 1e3, age_nodes(tau.max() / n_steps, tau.max()))
         width = np.sqrt(float(network.area[network.outlet].sum()))
         options = InversionOptions(range_space=share * width, range_time=share * float(tau.max()))
-        modes = make_prior(grid, options.range_space, options.range_time).n_modes
+        modes = nest_with_prior(grid, options.range_space, options.range_time)[1].n_modes
         seconds = timed_inversion(network, tau, grid, options)
         yardstick = eigh_seconds(modes)
         work = seconds["decomposition"] + seconds["errors"]
